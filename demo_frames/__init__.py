@@ -1,0 +1,1 @@
+"""The invented campaign of the demo: scenario and renderer."""

@@ -1,0 +1,1 @@
+"""When and through how much air: times, airmass, Sun and Moon."""

@@ -1,0 +1,1 @@
+"""Light curves to distances."""

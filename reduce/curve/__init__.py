@@ -1,0 +1,1 @@
+"""Frames to nights: nightly points and limits."""

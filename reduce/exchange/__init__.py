@@ -1,0 +1,1 @@
+"""Light curves in and out of files."""

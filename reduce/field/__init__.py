@@ -1,0 +1,1 @@
+"""Which star is which: matching, plate solution, comparison sequence."""

@@ -1,0 +1,1 @@
+"""From a file on disk to a trusted frame."""

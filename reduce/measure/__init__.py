@@ -1,0 +1,1 @@
+"""Pixels to fluxes: apertures, sky, noise, growth curve, stamps."""

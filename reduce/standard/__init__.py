@@ -1,0 +1,1 @@
+"""Fluxes to standard magnitudes: zero points, colour, extinction, verdicts."""

@@ -1,0 +1,1 @@
+"""Finding stars in an image: detection, centroid, width."""

@@ -1,0 +1,1 @@
+"""The two faces of Fadeline: the terminal app and the command line."""

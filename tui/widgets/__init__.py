@@ -1,0 +1,1 @@
+"""Widgets of the app: chart, preview, step line."""
