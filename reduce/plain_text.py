@@ -1,8 +1,12 @@
-"""Text from headers, file names and catalogues made harmless before anyone shows or stores it."""
+"""Plain words: text from outside made harmless, and the base of all errors that are one sentence."""
 
 from __future__ import annotations
 
 import unicodedata
+
+
+class PlainError(Exception):
+    """Something the user can act on; the message is one sentence: what is wrong, where, and what to do."""
 
 
 def clean_text(text: object, limit: int = 200) -> str:

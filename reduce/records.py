@@ -20,6 +20,8 @@ from typing import Any, Literal
 import numpy as np
 from numpy.typing import NDArray
 
+from reduce.plain_text import PlainError
+
 Floats = NDArray[np.float64]
 Image = NDArray[np.float32]
 Mask = NDArray[np.uint8]
@@ -43,7 +45,7 @@ COLOUR_OF_BAND: Mapping[str, tuple[str, str]] = {
 FLUX_ZERO_POINT = 25.0
 
 
-class FrameError(Exception):
+class FrameError(PlainError):
     """A file that cannot be used; the message is one sentence: what is wrong and what to do."""
 
 

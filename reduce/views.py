@@ -107,11 +107,13 @@ class TargetView:
     target: Target
     steps: tuple[Step, ...]
     next_sentence: str
-    """What wants doing next and which key does it."""
+    """What wants doing next."""
     estimate: Estimate | None
     night_points: tuple[Point, ...]
     frame_points: tuple[Point, ...]
     history: tuple[EstimateRow, ...]
+    next_screen: str = ""
+    """The screen where it is done; the app adds the key."""
 
 
 @dataclass(frozen=True, slots=True)

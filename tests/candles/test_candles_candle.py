@@ -1,0 +1,29 @@
+"""Which candle a kind of target gets, and that naming one costs no heavy import."""
+
+import subprocess
+import sys
+
+import pytest
+from candle_light_curves import TRUTH, simulated, target
+
+from reduce.candles import type_ia
+from reduce.candles.candle import TypeIa, candle_for
+
+
+def test_a_type_ia_target_gets_the_type_ia_fit():
+    curve = simulated(TRUTH)
+    assert candle_for("type_ia").fit(curve, target()).mu == type_ia.fit(curve, target()).mu
+    assert TypeIa(h0=70.0).fit(curve, target()).mu > type_ia.fit(curve, target()).mu
+
+
+@pytest.mark.parametrize("kind", ["cepheid", "rr_lyrae", "other"])
+def test_other_kinds_say_that_there_is_no_relation_yet(kind):
+    estimate = candle_for(kind).fit(simulated(TRUTH), target())
+    assert (estimate.mu, estimate.kind) == (None, kind)
+    assert estimate.verdict == "no distance relation for this kind yet"
+
+
+def test_naming_a_candle_loads_no_scientific_library():
+    code = "import sys, reduce.candles.candle; print({'scipy', 'astropy', 'pandas'} & set(sys.modules))"
+    out = subprocess.run([sys.executable, "-c", code], capture_output=True, text=True, check=True)
+    assert out.stdout.strip() == "set()"
