@@ -1,0 +1,40 @@
+"""Points and estimates as JSON objects whose keys do not change; unknown numbers are null, never NaN."""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Mapping, Sequence
+from dataclasses import asdict
+from typing import Any
+
+import numpy as np
+
+from reduce.records import Estimate, Point
+
+POINT_KEYS = (
+    "star", "file", "night", "band", "mjd", "bjd_tdb", "mag", "err", "err_night", "err_band", "flux",
+    "flux_err", "state", "flags", "host_method", "zp_group", "provisional",
+)  # fmt: skip
+
+
+def without_nan(value: Any) -> Any:
+    """The same value of lists, dicts, numbers and text, with None for numbers that are not finite."""
+    if isinstance(value, np.generic | np.ndarray):
+        return without_nan(value.tolist())
+    if isinstance(value, float):
+        return value if math.isfinite(value) else None
+    if isinstance(value, Mapping):
+        return {str(key): without_nan(item) for key, item in value.items()}
+    if isinstance(value, Sequence) and not isinstance(value, str):
+        return [without_nan(item) for item in value]
+    return value
+
+
+def point_to_json(point: Point) -> dict[str, Any]:
+    """Exactly the keys of POINT_KEYS; ``mjd`` UTC at mid-exposure, ``flux`` on zero point 25."""
+    return {key: without_nan(getattr(point, key)) for key in POINT_KEYS}
+
+
+def estimate_to_json(estimate: Estimate) -> dict[str, Any]:
+    """All fields of an estimate under their own names, warnings and budget as lists of objects."""
+    return {key: without_nan(value) for key, value in asdict(estimate).items()}
