@@ -4,16 +4,16 @@ from __future__ import annotations
 
 import json
 import sys
+import time
 from collections.abc import Callable
 from functools import wraps
 from pathlib import Path
-from typing import TYPE_CHECKING, Any, ParamSpec
+from typing import TYPE_CHECKING, Any, Literal, ParamSpec
 
 import click
 
 if TYPE_CHECKING:
     from reduce.campaign.door import Campaign
-
     from reduce.records import Target
 
 P = ParamSpec("P")
@@ -48,9 +48,7 @@ def plainly(command: Callable[P, None]) -> Callable[P, None]:
         except PlainError as error:
             raise OneSentence(str(error)) from error
         except OSError as error:
-            raise OneSentence(
-                f"{error.filename or 'A file'}: {(error.strerror or str(error)).lower()}."
-            ) from error
+            raise OneSentence(f"{error.filename or 'A file'}: {(error.strerror or str(error)).lower()}.") from error
 
     return run
 
@@ -109,21 +107,15 @@ def _target(text: str, ebv_mw: str | None, host: str | None, reference: Path | N
 
 @main.command()
 @click.argument("folder", metavar="DIR", type=FOLDER)
-@click.option(
-    "--frames", required=True, type=FOLDER, help="Folder where frames lie or land; searched recursively."
-)
+@click.option("--frames", required=True, type=FOLDER, help="Folder where frames lie or land; searched recursively.")
 @click.option("--sequence", required=True, type=FILE, help="Comparison stars: CSV with id,ra,dec,B,B_err,V,…")
 @click.option("--target", "targets", required=True, multiple=True, metavar='"NAME,RA,DEC,KIND[,Z]"',
               help="What is followed; KIND is type_ia, cepheid, rr_lyrae or other. Repeatable.")  # fmt: skip
 @click.option("--ebv-mw", metavar="E[,SCALE]",
               help="Milky Way E(B−V) of the first target; SCALE is SF11 (default) or SFD.")  # fmt: skip
 @click.option("--host", metavar="RA,DEC", help="Centre of the host galaxy of the first target, degrees.")
-@click.option(
-    "--reference", type=FOLDER, help="Folder of frames without the supernova; never used as science."
-)
-@click.option(
-    "--scale", type=click.FloatRange(0.01, 60), metavar="ARCSEC_PER_PIXEL", help="Pixel scale, unbinned."
-)
+@click.option("--reference", type=FOLDER, help="Folder of frames without the supernova; never used as science.")
+@click.option("--scale", type=click.FloatRange(0.01, 60), metavar="ARCSEC_PER_PIXEL", help="Pixel scale, unbinned.")
 @click.option("--site", metavar="LAT,LON,HEIGHT", help="Degrees north, degrees east, metres.")
 @plainly
 def new(
@@ -212,14 +204,24 @@ def _stop_wish(until_input_ends: bool) -> Callable[[], bool]:
     return asked.is_set
 
 
-def _progress(text: str) -> None:
-    """One line on stderr; overwritten in place on a terminal."""
-    if sys.stderr.isatty():
-        click.echo(f"\r\x1b[K{text}", err=True, nl=False)
-        if not text:
-            click.echo("\r\x1b[K", err=True, nl=False)
-    elif text:
-        click.echo(text, err=True)
+class _Progress:
+    """One line on stderr, overwritten in place; where that is no terminal, a line every few seconds."""
+
+    every_s = 5.0
+
+    def __init__(self) -> None:
+        self._last = 0.0
+
+    def __call__(self, text: str) -> None:
+        now = time.monotonic()
+        if sys.stderr.isatty():
+            click.echo(f"\r\x1b[K{text}", err=True, nl=False)
+        elif text and now - self._last >= self.every_s:
+            self._last = now
+            click.echo(text, err=True)
+
+
+_progress = _Progress()
 
 
 @main.command()
@@ -244,22 +246,19 @@ def curve(folder: Path, target: str | None, per_frame: bool, all_stars: bool, as
         errors = "  ".join("  –   " if e is None else f"{e:6.4f}" for e in (p.err, p.err_night, p.err_band))
         name = "" if p.file is None else f"  {p.file}"
         who = f"  {p.star}" if all_stars else ""
-        click.echo(
-            f"{p.night}  {p.band:4}  {p.mjd:12.5f}  {mag}  {errors}  {p.state:9} {p.n_frames}{name}{who}"
-        )
+        click.echo(f"{p.night}  {p.band:4}  {p.mjd:12.5f}  {mag}  {errors}  {p.state:9} {p.n_frames}{name}{who}")
 
 
 @main.command()
 @click.argument("folder", metavar="[DIR]", type=FOLDER, required=False)
 @click.argument("target", required=False)
-@click.option("--light-curve", type=FILE, help="Fit a CSV light curve instead: name,mjd,band,mag,err,z,ebv_mw[,flux,flux_err].")  # fmt: skip
+@click.option("--light-curve", type=FILE, help="Fit a CSV file instead: name,mjd,band,mag,err,z,ebv_mw[,flux,flux_err].")  # fmt: skip
 @click.option("--json", "as_json", is_flag=True, help="One JSON object a target, on a line.")
 @plainly
 def distance(folder: Path | None, target: str | None, light_curve: Path | None, as_json: bool) -> None:
     """Print the distance modulus, how sure it is and why."""
-    from reduce.exchange.point_json import estimate_to_json
-
     from reduce.campaign.estimates import estimate_file
+    from reduce.exchange.point_json import estimate_to_json
 
     if light_curve is not None:
         if folder is not None:
@@ -321,10 +320,13 @@ def log(folder: Path, search: str | None, target_name: str | None, as_json: bool
 @click.option("--output", "-o", type=FILE, help="File to write; default: standard output.")
 @click.option("--per-frame", is_flag=True, help="One row a frame instead of one a night and band.")
 @plainly
-def export(folder: Path, target: str | None, style: str | None, output: Path | None, per_frame: bool) -> None:
+def export(
+    folder: Path, target: str | None, style: Literal["ecsv", "csv"] | None, output: Path | None, per_frame: bool
+) -> None:
     """Write the calibrated light curve as an ECSV table or CSV."""
     campaign = _campaign(folder)
-    chosen = style or ("csv" if output is not None and output.suffix.lower() == ".csv" else "ecsv")
+    by_name: Literal["ecsv", "csv"] = "csv" if output is not None and output.suffix.lower() == ".csv" else "ecsv"
+    chosen = style or by_name
     n = campaign.export(campaign.target(target).name, output, chosen, per_frame=per_frame)
     if output is not None:
         click.echo(f"{n} points written to {output}.", err=True)
@@ -338,7 +340,6 @@ def export(folder: Path, target: str | None, style: str | None, output: Path | N
 def inspect(files: tuple[Path, ...], as_json: bool, folder: Path | None) -> None:
     """Say what each file is and what was understood of it."""
     from reduce.frames.reader import inspect_file
-
     from reduce.settings import Settings, read_settings
     from tui.inspect_text import inspect_lines
 
@@ -370,18 +371,14 @@ def doctor(folder: Path | None) -> None:
 
 
 @main.command()
-@click.option(
-    "--seed", type=click.IntRange(0), default=1, show_default=True, help="Another seed, another sky."
-)
+@click.option("--seed", type=click.IntRange(0), default=1, show_default=True, help="Another seed, another sky.")
 @click.option("--scatter", is_flag=True, help="Draw the intrinsic scatter of real supernovae.")
 @click.option("--headless", is_flag=True, help="Reduce and print; do not open the app.")
 @click.option("--json", "as_json", is_flag=True, help="With --headless: one JSON object.")
 @click.option("--folder", type=FOLDER, help="Where to put it; default: ./fadeline-demo-SEED.")
 @click.option("--workers", type=click.IntRange(1, 64), help="Processes; default: the number of cores.")
 @plainly
-def demo(
-    seed: int, scatter: bool, headless: bool, as_json: bool, folder: Path | None, workers: int | None
-) -> None:
+def demo(seed: int, scatter: bool, headless: bool, as_json: bool, folder: Path | None, workers: int | None) -> None:
     """Render an invented campaign with known truth and reduce it."""
     from tui.demo import prepare_demo, report_demo
 

@@ -33,9 +33,7 @@ def prepare_demo(place: Path, seed: int, scatter: bool, progress: Callable[[str]
     if (place / "truth.json").exists():
         truth = read_truth(place)
         if (truth.seed, truth.scatter) != (seed, scatter):
-            raise DemoError(
-                f"{place} holds the demo of seed {truth.seed}: choose another --folder, or remove it."
-            )
+            raise DemoError(f"{place} holds the demo of seed {truth.seed}: choose another --folder, or remove it.")
         if campaign_folder.exists():
             return campaign_folder
     elif place.exists() and any(place.iterdir()):
@@ -105,10 +103,10 @@ def compare_photometry(
     The truth of a nightly point is the mean true magnitude of its kept frames, weighted as the frames are.
     ``chi2_reduced`` counts the errors that a night has for itself (``err`` and ``err_night``), not ``err_band``.
     """
-    true_mag = {frame.file: frame.true_mag for frame in truth.frames}
+    true_mag = {frame.file: frame.true_mag for frame in truth.frames if frame.true_mag is not None}
     parts: defaultdict[tuple[str, str], list[tuple[float, float]]] = defaultdict(list)
     for point in frame_points:
-        if point.state == "kept" and point.file in true_mag and true_mag[point.file] is not None:
+        if point.state == "kept" and point.file in true_mag:
             parts[point.night, point.band].append((true_mag[point.file], point.flux_err**-2))
     offsets: defaultdict[str, list[tuple[float, float]]] = defaultdict(list)
     for point in night_points:
@@ -116,9 +114,7 @@ def compare_photometry(
         if point.state != "kept" or point.mag is None or not frames:
             continue
         true = float(np.average([mag for mag, _ in frames], weights=[weight for _, weight in frames]))
-        offsets[point.band].append(
-            (point.mag - true, float(np.hypot(point.err or 0.0, point.err_night or 0.0)))
-        )
+        offsets[point.band].append((point.mag - true, float(np.hypot(point.err or 0.0, point.err_night or 0.0))))
     result: dict[str, dict[str, float | int]] = {}
     for band in sorted(offsets, key="BVRIgri".index):
         offset, error = np.array(offsets[band]).T

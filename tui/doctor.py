@@ -63,9 +63,7 @@ def _time_data() -> Finding:
     from reduce.almanac.times import bjd_tdb
 
     value = float(bjd_tdb(60000.0, 0.0, 0.0, None))
-    return Finding(
-        abs(value - 2460000.5) < 0.01, "Barycentric times are computed from built-in tables (no network)."
-    )
+    return Finding(abs(value - 2460000.5) < 0.01, "Barycentric times are computed from built-in tables (no network).")
 
 
 def _campaign(folder: Path) -> list[Finding]:

@@ -13,11 +13,7 @@ def _with_error(value: float | None, error: float | None, digits: int) -> str:
 
 def estimate_lines(estimate: Estimate) -> list[str]:
     """Lines of text: the modulus, its parameters, the budget and every warning with its evidence."""
-    mu = (
-        "cannot tell yet"
-        if estimate.mu is None
-        else f"μ = {_with_error(estimate.mu, estimate.mu_err, 3)} mag"
-    )
+    mu = "cannot tell yet" if estimate.mu is None else f"μ = {_with_error(estimate.mu, estimate.mu_err, 3)} mag"
     lines = [f"{estimate.target}: {mu}", f"  {estimate.verdict}"]
     if estimate.n:
         lines.append(

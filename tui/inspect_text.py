@@ -22,12 +22,6 @@ def inspect_lines(found: Mapping[str, Any]) -> list[str]:
     lines = [f"{name}: {found['nx']} × {found['ny']} pixels"]
     for key, unit in _SHOWN:
         value = found.get(key)
-        text = (
-            "not stated"
-            if value is None or value == ""
-            else f"{value:.8g}"
-            if isinstance(value, float)
-            else value
-        )
+        text = "not stated" if value is None or value == "" else f"{value:.8g}" if isinstance(value, float) else value
         lines.append(f"  {key.split('_')[0]:12} {text} {unit if value is not None else ''}".rstrip())
     return lines + [f"  note: {note}" for note in found.get("notes", ())]

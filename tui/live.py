@@ -124,9 +124,7 @@ def start_reducer(folder: Path) -> subprocess.Popen[bytes]:
     """
     command = [sys.executable, "-m", "tui.cli", "reduce", str(folder), "--follow", "--until-input-ends"]
     quiet = subprocess.DEVNULL
-    return subprocess.Popen(
-        command, stdin=subprocess.PIPE, stdout=quiet, stderr=quiet, start_new_session=True
-    )
+    return subprocess.Popen(command, stdin=subprocess.PIPE, stdout=quiet, stderr=quiet, start_new_session=True)
 
 
 def run_app(folder: Path) -> None:
@@ -138,9 +136,7 @@ def run_app(folder: Path) -> None:
         The folder holds no campaign.
     """
     if not (folder / FILE_NAME).exists():
-        raise PlainError(
-            f"{folder.resolve()} holds no campaign; try: fadeline demo, or make one with: fadeline new."
-        )
+        raise PlainError(f"{folder.resolve()} holds no campaign; try: fadeline demo, or make one with: fadeline new.")
     prepare_environment(os.environ)
     prepare_processes(("reduce.campaign.picture",))
     from tui.app import FadelineApp

@@ -120,6 +120,9 @@ def _ecsv(points: Sequence[Point], target: Target | None, meta: Mapping[str, Any
     from astropy.table import MaskedColumn, Table
 
     rows = [_cells(point) for point in points]
+    for row in rows:
+        if row["star"].startswith("#"):  # a line that begins with it would be read as a comment
+            row["star"] = f"'{row['star']}"
     table = Table(masked=False)
     for key in POINT_KEYS:
         column = _COLUMNS[key]

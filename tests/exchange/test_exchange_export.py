@@ -106,6 +106,13 @@ def test_any_point_survives_both_forms(name, flux, mag):
             assert table[key][0] == value
 
 
+def test_a_name_like_a_comment_loses_no_row():
+    from dataclasses import replace
+
+    table = Table.read(text_of([replace(NIGHT, star="#1"), NIGHT], "ecsv"), format="ascii.ecsv")
+    assert list(table["star"]) == ["'#1", NIGHT.star]
+
+
 def test_a_file_is_replaced_as_a_whole(tmp_path, monkeypatch):
     path = tmp_path / "curve.ecsv"
     write_points([NIGHT], TARGET, path)

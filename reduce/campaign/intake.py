@@ -1,0 +1,222 @@
+"""From folders to known frames: what landed, what each file is, which masters there are, what wants measuring."""
+
+from __future__ import annotations
+
+import time
+from collections.abc import Callable, Iterable
+from dataclasses import asdict, dataclass, field
+from pathlib import Path
+
+from reduce.frames.arrival import Stamp, completeness, scan
+from reduce.frames.master_sets import ChosenMasters, Master, MasterPlan, choose_masters, plan_masters
+from reduce.frames.masters import build_master, standing_master
+from reduce.frames.reader import frame_id, open_frame
+from reduce.logbook.store import Logbook
+from reduce.logbook.store import Master as MasterRow
+from reduce.pipeline import Recipe
+from reduce.plain_text import clean_text
+from reduce.records import FrameError, FrameInfo, Sequence, Target
+from reduce.settings import Settings
+
+STILL_WRITING_S = 30.0
+"""A file that is short and was touched this recently is still being written; later it is cut short."""
+RESTED_S = 4.0
+"""A whole file that was touched this recently must look the same twice: some writers reserve the size first."""
+CALIBRATION = ("bias", "dark", "flat")
+
+
+@dataclass(frozen=True, slots=True)
+class KnownFrame:
+    """One readable file of the campaign."""
+
+    id: str
+    path: Path
+    info: FrameInfo
+
+
+@dataclass
+class Intake:
+    """The campaign's files, as they lie in the folders and as the logbook knows them."""
+
+    book: Logbook
+    settings: Settings
+    folder: Path
+    reference_folders: tuple[Path, ...]
+    masters_folder: Path
+    waiting: dict[Path, str] = field(default_factory=dict)
+    """File still being written → how far it is."""
+    refused: dict[str, str] = field(default_factory=dict)
+    """Master that could not be made → why."""
+    _taken: dict[Path, Stamp] = field(default_factory=dict)
+    _seen: dict[Path, Stamp] = field(default_factory=dict)
+    _infos: dict[tuple[Path, int, int], FrameInfo | None] = field(default_factory=dict)
+    _masters: dict[str, Master] = field(default_factory=dict)
+
+    # ---- files -------------------------------------------------------------------------------------------
+
+    def look(self, progress: Callable[[str], None], now_s: Callable[[], float] = time.time) -> bool:
+        """Take what has landed or changed into the logbook; True when something did."""
+        known = self.book.known_locations()
+        found = {path: stamp for path, stamp in scan(self.folder).items() if not self._is_reference(path)}
+        changed = False
+        self.waiting = {path: why for path, why in self.waiting.items() if path in found}
+        for path in self.book.problems().keys() - found.keys():
+            self.book.add_problem(path, 0, 0, "")
+            changed = True
+        for n, (path, stamp) in enumerate(found.items(), 1):
+            if self._taken.get(path) == stamp:
+                continue
+            if n % 20 == 0:
+                progress(f"looking at file {n} of {len(found)}")
+            place = known.get(path)
+            if place is not None and (place.size, place.mtime_ns) == stamp:
+                self._taken[path] = stamp
+            elif self._is_settled(path, stamp, now_s()):
+                self.waiting.pop(path, None)
+                self._take(path, stamp)
+                self._taken[path] = stamp
+                changed = True
+        self._seen = found
+        return changed
+
+    def _is_reference(self, path: Path) -> bool:
+        return any(path.is_relative_to(folder) for folder in self.reference_folders)
+
+    def _is_settled(self, path: Path, stamp: Stamp, now_s: float) -> bool:
+        """Whether the file can be taken now; `waiting` says why not."""
+        age_s = now_s - stamp[1] / 1e9
+        if 0 <= age_s < STILL_WRITING_S and (lacks := completeness(path)) is not None:
+            self.waiting[path] = f"it is still being written: {lacks}"
+            return False
+        if 0 <= age_s < RESTED_S and self._seen.get(path) != stamp and self._seen:
+            self.waiting[path] = "it has just landed."
+            return False
+        return True
+
+    def _take(self, path: Path, stamp: Stamp) -> None:
+        try:
+            opened = open_frame(path, self.settings)
+            frame = frame_id(path)
+        except FrameError as error:
+            self.book.add_problem(path, *stamp, str(error))
+            return
+        self.book.add_frame(frame, opened.header)
+        self.book.add_location(frame, path, *stamp)
+        self.book.add_problem(path, *stamp, "")
+        self._infos[path, *stamp] = opened.info
+
+    def known_frames(self) -> list[KnownFrame]:
+        """Every frame of the logbook by time and id; a copy counts once, the path seen first stands for it."""
+        found: dict[str, KnownFrame] = {}
+        measured: dict[str, FrameInfo] | None = None
+        for path, place in self.book.known_locations().items():
+            if place.frame in found or self._is_reference(path):
+                continue
+            key = (path, place.size, place.mtime_ns)
+            if key not in self._infos:
+                self._infos[key] = self._read_info(path)
+            info = self._infos[key]
+            if info is None:
+                if measured is None:
+                    rows = self.book.newest_reductions()
+                    measured = {row.frame: row.info for row in rows if row.info is not None}
+                info = measured.get(place.frame)
+            if info is not None:
+                found[place.frame] = KnownFrame(place.frame, path, info)
+        return sorted(found.values(), key=lambda frame: (frame.info.mjd_mid or 0.0, frame.id))
+
+    def _read_info(self, path: Path) -> FrameInfo | None:
+        """What the file's header says now; None when the file is gone or no longer whole."""
+        try:
+            return open_frame(path, self.settings).info
+        except FrameError:
+            return None
+
+    # ---- masters -----------------------------------------------------------------------------------------
+
+    def plans(self, frames: Iterable[KnownFrame]) -> list[MasterPlan]:
+        """Masters that the calibration frames make, bias before dark before flat."""
+        return plan_masters((f.id, f.path, f.info) for f in frames if f.info.kind in CALIBRATION)
+
+    def build_masters(self, frames: Iterable[KnownFrame], progress: Callable[[str], None]) -> list[Master]:
+        """All masters, built where they do not stand yet; `refused` says which could not be made and why."""
+        masters: list[Master] = []
+        self.refused = {}
+        for plan in self.plans(frames):
+            progress(f"master {clean_text(plan.label)} of {len(plan.inputs)} frames")
+            try:
+                master = build_master(plan, masters, self.masters_folder, self.settings)
+            except FrameError as error:
+                self.refused[plan.label] = str(error)
+                continue
+            masters.append(master)
+            content = {key: value for key, value in asdict(master).items() if key not in ("path", "inputs")}
+            self.book.add_master(MasterRow(master.digest, master.kind, content, master.inputs))
+        return masters
+
+    def standing_masters(self, frames: Iterable[KnownFrame]) -> list[Master]:
+        """Those of the planned masters that have been built."""
+        built = {row.digest for row in self.book.masters()}
+        masters: list[Master] = []
+        for plan in self.plans(frames):
+            master = standing_master(plan, masters, self.masters_folder, self._masters)
+            if master is not None and master.digest in built:
+                self._masters[master.digest] = master
+                masters.append(master)
+        return masters
+
+    # ---- lights ------------------------------------------------------------------------------------------
+
+    def recipe(
+        self, info: FrameInfo, masters: Iterable[Master], targets: tuple[Target, ...], astrometric: Sequence
+    ) -> Recipe:
+        """How a frame is to be measured with these masters."""
+        return Recipe(self.settings, self.chosen(info, masters), targets, astrometric)
+
+    def chosen(self, info: FrameInfo, masters: Iterable[Master]) -> ChosenMasters:
+        """Masters for one frame."""
+        return choose_masters(info, masters)
+
+    def wanted_recipes(
+        self, frames: Iterable[KnownFrame], targets: tuple[Target, ...], astrometric: Sequence
+    ) -> dict[str, str]:
+        """Light frame → digest of the recipe it should have, with the masters that stand."""
+        frames = list(frames)
+        masters = self.standing_masters(frames)
+        digests: dict[tuple[str | None, ...], str] = {}
+        wanted = {}
+        for frame in frames:
+            if frame.info.kind == "light":
+                recipe = self.recipe(frame.info, masters, targets, astrometric)
+                key = tuple(recipe.masters.digests())
+                if key not in digests:
+                    digests[key] = recipe.digest()
+                wanted[frame.id] = digests[key]
+        return wanted
+
+    def calibration_sentences(self, frames: Iterable[KnownFrame]) -> tuple[tuple[str, ...], list[str]]:
+        """One sentence a master, and one a kind of master that light frames lack."""
+        frames = list(frames)
+        masters = self.standing_masters(frames)
+        standing = tuple(
+            f"{plan.kind} {plan.band or ''}".strip()
+            + (f" {plan.exposure_s:g} s" if plan.kind == "dark" and plan.exposure_s else "")
+            + f": {len(plan.inputs)} frames, {'ready' if self._stands(plan, masters) else 'not built'}."
+            for plan in self.plans(frames)
+        )
+        missing: dict[str, None] = {}
+        for frame in frames:
+            if frame.info.kind != "light":
+                continue
+            chosen = self.chosen(frame.info, masters)
+            band = frame.info.band or clean_text(frame.info.filter_name)
+            if chosen.flat is None:
+                missing[f"no flat in {band}"] = None
+            if chosen.bias is None and chosen.dark is None:
+                missing["no bias and no dark"] = None
+        return standing, list(missing)
+
+    @staticmethod
+    def _stands(plan: MasterPlan, masters: Iterable[Master]) -> bool:
+        ids = {frame.id for frame in plan.inputs}
+        return any(master.kind == plan.kind and set(master.inputs) == ids for master in masters)

@@ -1,0 +1,15 @@
+"""Who decides and notes."""
+
+from __future__ import annotations
+
+import getpass
+
+from reduce.plain_text import clean_text
+
+
+def who() -> str:
+    """Name of the person at the keyboard, as the system knows it."""
+    try:
+        return clean_text(getpass.getuser(), 60)
+    except (KeyError, OSError):
+        return "unknown"

@@ -1,0 +1,264 @@
+"""Reduce what has landed: look, build masters, measure, store, solve, estimate, report; once, or until stopped."""
+
+from __future__ import annotations
+
+import logging
+import time
+from collections.abc import Callable, Iterator
+from dataclasses import dataclass
+from logging.handlers import RotatingFileHandler
+from pathlib import Path
+from typing import TYPE_CHECKING, Any
+
+from reduce.logbook.lock import reducer_lock
+from reduce.pipeline import Recipe, measure_frame
+from reduce.records import Measured, Point
+from reduce.runner import TaskResult, run_tasks
+from reduce.views import FrameRow
+
+if TYPE_CHECKING:
+    from reduce.campaign.door import Campaign
+    from reduce.campaign.intake import Intake
+
+FRAME_TIMEOUT_S = 300.0
+LOOK_EVERY_S = 2.0
+MOST_ATTEMPTS = 2
+PROGRAM = "fadeline"
+"""Who writes events into the log."""
+MOVED_MAG = 0.001
+"""A nightly point that moved by less is not worth a line."""
+
+_log = logging.getLogger("fadeline")
+
+
+@dataclass(frozen=True, slots=True)
+class MeasureTask:
+    """One frame to measure; travels to a worker process."""
+
+    path: Path
+    frame: str
+    recipe: Recipe
+    digest: str
+
+
+def measure_task(task: MeasureTask) -> Measured:
+    """What a worker does."""
+    return measure_frame(task.path, task.frame, task.recipe)
+
+
+@dataclass(frozen=True, slots=True)
+class Report:
+    """What one batch came to."""
+
+    rows: tuple[dict[str, Any], ...]
+    """One a frame: file, band, outcome, state, reason, seconds."""
+    summary: dict[str, Any]
+    sentence: str
+
+
+def reduce_frames(
+    campaign: Campaign,
+    follow: bool,
+    workers: int,
+    progress: Callable[[str], None],
+    should_stop: Callable[[], bool],
+) -> Iterator[Report]:
+    """Reduce the campaign's frames, one report a batch that changed something (at least one).
+
+    Parameters
+    ----------
+    follow
+        Look again every two seconds until ``should_stop``.
+    workers
+        Processes that measure.
+    progress
+        Receives one short line at a time; "" clears it.
+
+    Raises
+    ------
+    ReducerBusy
+        Another process reduces this campaign.
+    """
+    _write_log_file(campaign.folder)
+    with reducer_lock(campaign.folder):
+        intake = campaign.intake
+        first = True
+        while True:
+            started = time.monotonic()
+            changed = intake.look(progress)
+            if first or changed:
+                batch = _Batch(campaign, intake, workers, progress, should_stop)
+                batch.run()
+                progress("")
+                yield batch.report(time.monotonic() - started, everything=first)
+                first = False
+            if not follow or should_stop():
+                return
+            _wait(LOOK_EVERY_S, should_stop)
+
+
+def _wait(seconds: float, should_stop: Callable[[], bool]) -> None:
+    end = time.monotonic() + seconds
+    while time.monotonic() < end and not should_stop():
+        time.sleep(0.1)
+
+
+def _write_log_file(folder: Path) -> None:
+    """Tracebacks behind one-sentence errors go to a file in the campaign's folder."""
+    from reduce.campaign.door import LOG_FILE
+
+    if _log.handlers:
+        return
+    handler = RotatingFileHandler(folder / LOG_FILE, maxBytes=1_000_000, backupCount=2, delay=True, encoding="utf-8")
+    handler.setFormatter(logging.Formatter("%(asctime)s %(levelname)s %(message)s"))
+    _log.addHandler(handler)
+    _log.setLevel(logging.INFO)
+    _log.propagate = False
+
+
+class _Batch:
+    """Everything that wants measuring now."""
+
+    def __init__(
+        self,
+        campaign: Campaign,
+        intake: Intake,
+        workers: int,
+        progress: Callable[[str], None],
+        should_stop: Callable[[], bool],
+    ) -> None:
+        self.campaign, self.intake, self.workers = campaign, intake, workers
+        self.progress, self.should_stop = progress, should_stop
+        self.measured: set[str] = set()
+        self.done = 0
+
+    def run(self) -> None:
+        """Measure what is pending, then estimate every target."""
+        tasks, again = self._tasks()
+        before = self.campaign.curve_points() if again else ()
+        self.total = len(tasks)
+        if tasks:
+            self._measure(tasks)
+
+        if again and self.measured & again:
+            self._say_what_moved(len(self.measured & again), before)
+        for target in self.campaign.targets():
+            self.progress(f"fitting {target.name}")
+            self.campaign.estimate(target.name, f"{len(self.measured)} frames measured" if self.measured else "")
+
+    def _measure(self, tasks: list[MeasureTask]) -> None:
+        book = self.campaign.book
+        self.progress(f"measuring {self.total} frames")
+        run_tasks(
+            measure_task,
+            tasks,
+            min(self.workers, len(tasks)),
+            FRAME_TIMEOUT_S,
+            self._take,
+            before_start=lambda task: book.start_attempt(task.frame, task.digest) <= MOST_ATTEMPTS,
+            should_stop=self.should_stop,
+            preload=("reduce.pipeline",),
+        )
+
+    def _tasks(self) -> tuple[list[MeasureTask], set[str]]:
+        """Frames without a measurement of their present recipe, and those of them that have an older one."""
+        book = self.campaign.book
+        frames = self.intake.known_frames()
+        masters = self.intake.build_masters(frames, self.progress)
+        targets, stars = tuple(self.campaign.targets()), self.campaign.sequence()
+        done = book.reductions_done()
+        measured_once = {frame for frame, _ in done}
+        tasks = []
+        for frame in frames:
+            if frame.info.kind != "light":
+                continue
+            recipe = self.intake.recipe(frame.info, masters, targets, stars)
+            digest = recipe.digest()
+            if (frame.id, digest) not in done and frame.path.exists():
+                tasks.append(MeasureTask(frame.path, frame.id, recipe, digest))
+        return tasks, {task.frame for task in tasks} & measured_once
+
+    def _take(self, result: TaskResult[MeasureTask, Measured]) -> None:
+        book, task = self.campaign.book, result.task
+        self.done += 1
+        self.progress(f"measured {self.done} of {self.total} frames")
+        if result.ending == "stopped":
+            book.end_attempt(task.frame, task.digest, "stopped")
+            return
+        measured = result.value
+        if measured is None:
+            _log.error("%s: %s\n%s", task.path, result.sentence, result.detail)
+            book.end_attempt(task.frame, task.digest, result.ending)
+            reason = f"it could not be measured: {result.sentence} The log file holds the details."
+            measured = Measured(task.frame, task.digest, "unreadable", reason, seconds=result.seconds)
+        book.add_recipe(task.digest, task.recipe.content())
+        book.add_reduction(measured)
+        book.end_attempt(task.frame, task.digest, "done")
+        self.measured.add(task.frame)
+
+    def _say_what_moved(self, n: int, before: tuple[Point, ...]) -> None:
+        """One line in the log when frames were measured again."""
+        old = {(p.star, p.night, p.band): p.mag for p in before if p.mag is not None}
+        moves = [
+            abs(point.mag - old[key])
+            for point in self.campaign.curve_points()
+            if point.mag is not None and (key := (point.star, point.night, point.band)) in old
+        ]
+        moved = [move for move in moves if move > MOVED_MAG]
+        words = (
+            f"{len(moved)} of {len(moves)} nightly points moved by more than 1 mmag, at most {max(moved):.3f} mag"
+            if moved
+            else "no nightly point moved by more than 1 mmag"
+        )
+        self.campaign.book.note(
+            "", f"{n} frames measured again with newer calibration: {words}.", PROGRAM, kind="event"
+        )
+
+    # ---- report ------------------------------------------------------------------------------------------
+
+    def report(self, seconds: float, everything: bool) -> Report:
+        """Rows of all lights and unreadable files, or only of those that are new."""
+        picture = self.campaign.frame_rows()
+        durations = {row.frame: row.seconds for row in self.campaign.measured()}
+        shown = [row for row in picture if row.outcome != "calibration"]
+        rows = [
+            _row(row, durations.get(row.id)) for row in shown if everything or row.id in self.measured or not row.id
+        ]
+        rows += [
+            {
+                "file": path.name,
+                "band": None,
+                "outcome": "waiting",
+                "state": None,
+                "reason": why,
+                "seconds": None,
+            }
+            for path, why in sorted(self.intake.waiting.items())
+        ]
+        counts = {state: sum(row.state == state for row in shown) for state in ("kept", "doubtful", "dropped")}
+        unreadable = sum(row.outcome == "unreadable" for row in shown)
+        summary = {
+            "frames": len(shown),
+            "measured_now": len(self.measured),
+            **counts,
+            "unreadable": unreadable,
+            "waiting": len(self.intake.waiting),
+            "calibration": sum(row.outcome == "calibration" for row in picture),
+            "seconds": round(seconds, 2),
+        }
+        sentence = (
+            f"{len(shown)} frames: {counts['kept']} kept, {counts['doubtful']} doubtful, {counts['dropped']} dropped "
+            f"({unreadable} unreadable); {len(self.measured)} measured now in {seconds:.0f} s."
+        )
+        return Report(tuple(rows), summary, sentence)
+
+
+def _row(row: FrameRow, seconds: float | None) -> dict[str, Any]:
+    return {
+        "file": row.file,
+        "band": row.band,
+        "outcome": row.outcome,
+        "state": row.state,
+        "reason": row.reason,
+        "seconds": None if seconds is None else round(seconds, 3),
+    }

@@ -1,0 +1,59 @@
+"""Gain, read noise and saturation: measured from pairs of frames, or where to find them."""
+
+from __future__ import annotations
+
+import math
+
+import numpy as np
+from numpy.typing import ArrayLike
+
+from reduce.records import FrameInfo
+from reduce.settings import Settings
+
+DIGITISATION_ADU = 1.0 / math.sqrt(12.0)
+"""Standard deviation of rounding to whole numbers, uniform over one step."""
+LARGEST_16_BIT = 65535.0
+
+
+def gain_from_pairs(
+    flat_levels_adu: tuple[float, float],
+    bias_levels_adu: tuple[float, float],
+    flat_difference_sd_adu: float,
+    bias_difference_sd_adu: float,
+) -> float:
+    """Gain, e-/ADU, from two flats of one level and two biases: the photon transfer of Janesick.
+
+    ``[(F1 + F2) - (B1 + B2)] / [var(F1 - F2) - var(B1 - B2)]``; the difference of two frames frees the noise from the
+    pattern of the pixels.
+
+    Raises
+    ------
+    ValueError
+        The flats are not noisier than the biases.
+    """
+    noise = flat_difference_sd_adu**2 - bias_difference_sd_adu**2
+    signal = sum(flat_levels_adu) - sum(bias_levels_adu)
+    if noise <= 0 or signal <= 0:
+        raise ValueError("the flats must be brighter and noisier than the biases.")
+    return signal / noise
+
+
+def read_noise_from_pair(bias_difference_sd_adu: float, gain_e_per_adu: float) -> float:
+    """Read noise, e-, from the standard deviation of the difference of two biases, ADU."""
+    return gain_e_per_adu * bias_difference_sd_adu / math.sqrt(2.0)
+
+
+def pair_statistics(first: ArrayLike, second: ArrayLike) -> tuple[tuple[float, float], float]:
+    """Levels of two frames and the standard deviation of their difference, ADU, not moved by single odd pixels."""
+    a, b = np.asarray(first, np.float64), np.asarray(second, np.float64)
+    difference = a - b
+    low, high = np.percentile(difference, [15.865525393145708, 84.13447460685429])
+    return (float(np.median(a)), float(np.median(b))), float(high - low) / 2.0
+
+
+def saturation_level(info: FrameInfo, settings: Settings) -> tuple[float, str]:
+    """Raw level, ADU, at which a pixel is full, and a sentence when nobody states it."""
+    stated = info.saturation_adu or settings.camera.saturation_adu
+    if stated is not None:
+        return stated, ""
+    return LARGEST_16_BIT, "no saturation level is stated; 65535 ADU was assumed (saturation_adu under [camera])."

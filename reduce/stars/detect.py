@@ -1,0 +1,184 @@
+"""Finding stars: a matched filter, local maxima above the noise, and weighted moments of each."""
+
+from __future__ import annotations
+
+import math
+
+import numpy as np
+from numpy.typing import NDArray
+
+from reduce.records import Detections, Floats, Image, Mask, PixelFlag
+from reduce.stars.stamps import cut_out, offsets_of
+from reduce.stars.width import FWHM_PER_SIGMA, frame_fwhm
+
+THRESHOLD_SIGMA = 5.0
+FIRST_FWHM_PX = 3.5
+"""Of the first pass, which only measures the frame's own width."""
+MESH_PX = 64
+SMALLEST_WIDTH = 0.6
+"""A detection narrower than this times the frame's FWHM is a hot pixel or a cosmic ray."""
+LARGEST_FWHM_PX = 40.0
+MOMENT_ROUNDS = 20
+
+
+def detect(data_e: Image, mask: Mask, *, saturation_e: float, max_stars: int = 500) -> Detections:
+    """Stars of one frame, brightest first.
+
+    Parameters
+    ----------
+    data_e
+        (ny, nx) electrons with sky.
+    mask
+        (ny, nx) PixelFlag bits; bad pixels take no part.
+    saturation_e
+        Level (sky included) from which a pixel counts as saturated even when the mask does not say so.
+    max_stars
+        At most this many are returned.
+    """
+    bad = (mask & (PixelFlag.BAD | PixelFlag.NOT_FINITE)) != 0
+    bad |= ~np.isfinite(data_e)
+    if bad.all() or min(data_e.shape) < 16:
+        return _nothing()
+    level, sigma = background(data_e, bad)
+    if not sigma > 0:
+        return _nothing()
+    clean = np.where(bad, 0.0, data_e - level).astype(np.float32)
+    saturated = ((mask & PixelFlag.SATURATED) != 0) | (np.where(bad, 0.0, data_e) >= saturation_e)
+    first = _find(clean, sigma, FIRST_FWHM_PX, 150)
+    shapes = _moments(clean, *first[:2], FIRST_FWHM_PX)
+    usual = _usual_width(shapes.fwhm, saturated, *first[:2])
+    x, y, _ = _find(clean, sigma, usual, 2 * max_stars)
+    shape = _moments(clean, x, y, usual)
+    keep = np.isfinite(shape.fwhm) & (shape.fwhm > SMALLEST_WIDTH * usual) & (shape.fwhm < LARGEST_FWHM_PX)
+    x, y, shape = x[keep], y[keep], shape.take(keep)
+    half = max(2, math.ceil(1.5 * usual))
+    dx, dy = offsets_of(x, y, half)
+    near = dx**2 + dy**2 <= (1.5 * usual) ** 2
+    cuts = cut_out(clean, x, y, half, 0.0)
+    flux = np.where(near, cuts, 0.0).sum(axis=(1, 2)).astype(float)
+    peak = np.where(near, cuts, -np.inf).max(axis=(1, 2)).astype(float) if len(x) else np.zeros(0)
+    full = (np.where(near, cut_out(saturated, x, y, half, False), False)).any(axis=(1, 2))
+    order = np.lexsort((y, x, -flux))
+    order = order[flux[order] > 0][:max_stars]
+    return Detections(
+        x[order], y[order], flux[order], peak[order], shape.fwhm[order], shape.elongation[order], shape.angle[order],
+        full[order],
+    )  # fmt: skip
+
+
+def _nothing() -> Detections:
+    empty = np.zeros(0)
+    return Detections(empty, empty, empty, empty, empty, empty, empty, np.zeros(0, bool))
+
+
+def background(data_e: Image, bad: NDArray[np.bool_]) -> tuple[Image, float]:
+    """Smooth background (ny, nx) from clipped medians of a mesh, and the scatter of one pixel about it."""
+    from scipy.ndimage import map_coordinates, median_filter
+
+    ny, nx = data_e.shape
+    rows, columns = max(1, ny // MESH_PX), max(1, nx // MESH_PX)
+    y_edges, x_edges = np.linspace(0, ny, rows + 1).astype(int), np.linspace(0, nx, columns + 1).astype(int)
+    level, scatter = np.full((rows, columns), np.nan), np.full((rows, columns), np.nan)
+    for j in range(rows):
+        for i in range(columns):
+            at = np.s_[y_edges[j] : y_edges[j + 1], x_edges[i] : x_edges[i + 1]]
+            values = data_e[at][~bad[at]]
+            if len(values) < 20:
+                continue
+            middle = np.median(values)
+            spread = 1.4826 * np.median(np.abs(values - middle))
+            for _ in range(2):
+                values = values[np.abs(values - middle) <= 3.0 * spread]
+                middle = np.median(values)
+                spread = 1.4826 * np.median(np.abs(values - middle))
+            level[j, i], scatter[j, i] = middle, spread
+    if not np.isfinite(level).any():
+        return np.zeros_like(data_e), float("nan")
+    level = np.where(np.isfinite(level), level, np.nanmedian(level))
+    level = median_filter(level, size=3, mode="nearest")
+    y_at = np.interp(np.arange(ny), (y_edges[:-1] + y_edges[1:] - 1) / 2, np.arange(rows))
+    x_at = np.interp(np.arange(nx), (x_edges[:-1] + x_edges[1:] - 1) / 2, np.arange(columns))
+    smooth = map_coordinates(level, np.meshgrid(y_at, x_at, indexing="ij"), order=1, mode="nearest")
+    return smooth.astype(np.float32), float(np.nanmedian(scatter))
+
+
+def _find(clean: Image, sigma: float, fwhm_px: float, most: int) -> tuple[Floats, Floats, Floats]:
+    """Positions (to a third of a pixel) and heights of local maxima of the filtered image, highest first."""
+    from scipy.ndimage import gaussian_filter, maximum_filter
+
+    width = fwhm_px / FWHM_PER_SIGMA
+    smooth = gaussian_filter(clean, width, mode="nearest", truncate=3.0)
+    # A Gaussian filter keeps 1 / (2 σ √π) of white noise.
+    limit = THRESHOLD_SIGMA * sigma / (2.0 * width * math.sqrt(math.pi))
+    reach = max(3, 2 * round(fwhm_px / 2) + 1)
+    top = (smooth > limit) & (smooth == maximum_filter(smooth, size=reach, mode="nearest"))
+    y, x = np.nonzero(top)
+    height = smooth[y, x].astype(float)
+    order = np.lexsort((y, x, -height))[:most]
+    return x[order].astype(float), y[order].astype(float), height[order]
+
+
+class _Shapes:
+    def __init__(self, fwhm: Floats, elongation: Floats, angle: Floats) -> None:
+        self.fwhm, self.elongation, self.angle = fwhm, elongation, angle
+
+    def take(self, keep: NDArray[np.bool_]) -> _Shapes:
+        return _Shapes(self.fwhm[keep], self.elongation[keep], self.angle[keep])
+
+
+def _moments(clean: Image, x: Floats, y: Floats, fwhm_px: float) -> _Shapes:
+    """Adaptive second moments: an elliptical Gaussian weight that takes the shape it measures.
+
+    (Bernstein & Jarvis 2002, AJ 123, 583, §3.) ``x`` and ``y`` are moved to the weighted centres in place.
+    """
+    n = len(x)
+    if n == 0:
+        return _Shapes(np.zeros(0), np.zeros(0), np.zeros(0))
+    half = math.ceil(2.0 * fwhm_px) + 2
+    cuts = cut_out(clean, x, y, half, 0.0).astype(float)
+    grid = np.arange(-half, half + 1, dtype=float)
+    gx, gy = grid[None, None, :], grid[None, :, None]
+    cx, cy = np.zeros(n), np.zeros(n)
+    start = (fwhm_px / FWHM_PER_SIGMA) ** 2
+    xx, yy, xy = np.full(n, start), np.full(n, start), np.zeros(n)
+    alive = np.ones(n, bool)
+    for _ in range(MOMENT_ROUNDS):
+        det = xx * yy - xy**2
+        dx, dy = gx - cx[:, None, None], gy - cy[:, None, None]
+        exponent = (
+            yy[:, None, None] * dx**2 + xx[:, None, None] * dy**2 - 2 * xy[:, None, None] * dx * dy
+        ) / det[:, None, None]
+        light = cuts * np.exp(-0.5 * np.minimum(exponent, 60.0))
+        total = light.sum(axis=(1, 2))
+        safe = np.where(total > 0, total, np.inf)
+        mx, my = (light * dx).sum(axis=(1, 2)) / safe, (light * dy).sum(axis=(1, 2)) / safe
+        # Weight and image of one shape: the product has half the covariance of either.
+        new_xx = 2.0 * (light * dx**2).sum(axis=(1, 2)) / safe
+        new_yy = 2.0 * (light * dy**2).sum(axis=(1, 2)) / safe
+        new_xy = 2.0 * (light * dx * dy).sum(axis=(1, 2)) / safe
+        new_det = new_xx * new_yy - new_xy**2
+        alive &= (total > 0) & (new_xx > 0.02) & (new_yy > 0.02) & (new_det > 1e-3)
+        alive &= (np.abs(cx + 2 * mx) < half) & (np.abs(cy + 2 * my) < half) & (new_xx < half**2) & (new_yy < half**2)
+        cx, cy = np.where(alive, cx + 2 * mx, cx), np.where(alive, cy + 2 * my, cy)
+        xx, yy = np.where(alive, new_xx, xx), np.where(alive, new_yy, yy)
+        xy = np.where(alive, new_xy, xy)
+    x += np.where(alive, cx, 0.0)
+    y += np.where(alive, cy, 0.0)
+    middle, half_difference = (xx + yy) / 2, np.hypot((xx - yy) / 2, xy)
+    major, minor = middle + half_difference, np.maximum(middle - half_difference, 1e-3)
+    fwhm = np.where(alive, FWHM_PER_SIGMA * (major * minor) ** 0.25, np.nan)
+    angle = np.degrees(0.5 * np.arctan2(2 * xy, xx - yy)) % 180.0
+    return _Shapes(fwhm, np.sqrt(major / minor), angle)
+
+
+def _usual_width(fwhm: Floats, saturated: NDArray[np.bool_], x: Floats, y: Floats) -> float:
+    """Width of the frame from the first pass; cosmic rays and hot pixels are fewer or fainter than stars."""
+    known = np.isfinite(fwhm)
+    if not known.any():
+        return FIRST_FWHM_PX
+    ny, nx = saturated.shape
+    column, row = np.clip(np.rint(x), 0, nx - 1).astype(int), np.clip(np.rint(y), 0, ny - 1).astype(int)
+    full = saturated[row, column]
+    seen = Detections(x, y, fwhm, fwhm, np.where(fwhm > 1.2, fwhm, np.nan), fwhm, fwhm, full)
+    width = frame_fwhm(seen)
+    return float(np.clip(width, 1.2, LARGEST_FWHM_PX / 2)) if math.isfinite(width) else FIRST_FWHM_PX
