@@ -200,7 +200,8 @@ def _measure_stars(
         table["target"][row] = recipe.targets[k].name
         table["ra_deg"][row], table["dec_deg"][row] = target_ra[k], target_dec[k]
     snr = np.nanmax(table["flux_e"] / table["flux_err_e"], axis=1, initial=0.0)
-    return table[(table["role"] == 1) | (snr > LEAST_STAR_SNR)]
+    kept: NDArray[Any] = table[(table["role"] == 1) | (snr > LEAST_STAR_SNR)]
+    return kept
 
 
 def _quality(

@@ -363,7 +363,7 @@ class FrameVerdict:
 
 @dataclass(frozen=True, slots=True)
 class Point:
-    """One magnitude of one star: of a frame (``file`` set) or of a night (``file`` None). JSON form in DEVELOPERS.md."""
+    """One magnitude of one star: of a frame (``file`` set) or of a night (``file`` None)."""
 
     star: str
     file: str | None

@@ -111,9 +111,7 @@ def parse_settings(text: str, source: str = "observatory.toml") -> Settings:
             near = get_close_matches(str(first["loc"][-1]), _known_keys(first["loc"]), 1, 0.3)
             hint = f"; did you mean {near[0]}?" if near else "; remove it."
             raise SettingsError(f"{source} has an unknown key {key}{hint}") from error
-        raise SettingsError(
-            f"{source}, key {key}: {first['msg'].lower()} (found {first['input']!r})."
-        ) from error
+        raise SettingsError(f"{source}, key {key}: {first['msg'].lower()} (found {first['input']!r}).") from error
 
 
 def read_settings(path: Path) -> Settings:

@@ -14,7 +14,7 @@ from typing import TYPE_CHECKING, Self
 from reduce.campaign.decide import decision_of
 from reduce.campaign.estimates import estimate_target, inputs_digest
 from reduce.campaign.intake import Intake, KnownFrame
-from reduce.campaign.people import who
+from reduce.campaign.people import PROGRAM, who
 from reduce.campaign.targets import TargetError
 from reduce.exchange.export import ExportFormat, write_points
 from reduce.field.sequence import SequenceError, read_sequence
@@ -99,6 +99,8 @@ class Campaign:
             book.add_sequence(stars)
             for target in targets:
                 book.add_target(target)
+            followed = ", ".join(names)
+            book.note("", f"Campaign made for {followed}; frames in {frames}.", PROGRAM, kind="event")
         return cls.open(folder)
 
     @classmethod
@@ -265,6 +267,16 @@ class Campaign:
         if any(point.star == chosen.name for point in points):
             self.book.add_estimate(found, digest, why or self._what_changed(chosen.name))
         return found
+
+    def estimate_nights(self, target: str) -> None:
+        """Add to the running history, in order, the nights that are not in it yet: each as it stood that evening."""
+        chosen = self.target(target)
+        points = [point for point in self.solution().night_points if point.star == chosen.name]
+        nights = sorted({point.night for point in points})
+        done = {row.why for row in self.book.history(chosen.name)}
+        for night in [night for night in nights if f"night {night}" not in done]:
+            until = [point for point in points if point.night <= night]
+            self.book.add_estimate(estimate_target(chosen, until), inputs_digest(chosen, until), f"night {night}")
 
     def _what_changed(self, target: str) -> str:
         history = self.book.history(target)

@@ -6,6 +6,9 @@ import getpass
 
 from reduce.plain_text import clean_text
 
+PROGRAM = "fadeline"
+"""Who writes events into the log."""
+
 
 def who() -> str:
     """Name of the person at the keyboard, as the system knows it."""

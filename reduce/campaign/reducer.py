@@ -10,6 +10,7 @@ from logging.handlers import RotatingFileHandler
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
+from reduce.campaign.people import PROGRAM
 from reduce.logbook.lock import reducer_lock
 from reduce.pipeline import Recipe, measure_frame
 from reduce.records import Measured, Point
@@ -23,8 +24,6 @@ if TYPE_CHECKING:
 FRAME_TIMEOUT_S = 300.0
 LOOK_EVERY_S = 2.0
 MOST_ATTEMPTS = 2
-PROGRAM = "fadeline"
-"""Who writes events into the log."""
 MOVED_MAG = 0.001
 """A nightly point that moved by less is not worth a line."""
 
@@ -140,10 +139,13 @@ class _Batch:
         if tasks:
             self._measure(tasks)
 
-        if again and self.measured & again:
+        if self.measured - again:
+            self._say_what_came(self.measured - again)
+        if self.measured & again:
             self._say_what_moved(len(self.measured & again), before)
         for target in self.campaign.targets():
             self.progress(f"fitting {target.name}")
+            self.campaign.estimate_nights(target.name)
             self.campaign.estimate(target.name, f"{len(self.measured)} frames measured" if self.measured else "")
 
     def _measure(self, tasks: list[MeasureTask]) -> None:
@@ -195,6 +197,17 @@ class _Batch:
         book.add_reduction(measured)
         book.end_attempt(task.frame, task.digest, "done")
         self.measured.add(task.frame)
+
+    def _say_what_came(self, new: set[str]) -> None:
+        """One line a night in the log on the frames that were measured for the first time."""
+        nights: dict[str, list[FrameRow]] = {}
+        for row in self.campaign.frame_rows():
+            if row.id in new:
+                nights.setdefault(row.night, []).append(row)
+        for night, rows in sorted(nights.items()):
+            counts = [f"{sum(row.state == state for row in rows)} {state}" for state in ("kept", "doubtful", "dropped")]
+            words = f"Night {night}: {len(rows)} frames measured: {', '.join(counts)}."
+            self.campaign.book.note("", words, PROGRAM, night=night, kind="event")
 
     def _say_what_moved(self, n: int, before: tuple[Point, ...]) -> None:
         """One line in the log when frames were measured again."""

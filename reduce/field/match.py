@@ -10,6 +10,7 @@ from __future__ import annotations
 import math
 from dataclasses import dataclass
 from itertools import combinations
+from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
@@ -199,8 +200,9 @@ class _Search:
             return np.zeros(0, dtype=np.int64), np.zeros(0, dtype=np.int64)
         places = np.column_stack([x[usable], y[usable]])
         spots = np.column_stack([self.x, self.y])
-        distance, nearest = cKDTree(spots).query(places, distance_upper_bound=tolerance)
-        _, back = cKDTree(places).query(spots)
+        far, to = cKDTree(spots).query(places, distance_upper_bound=tolerance)
+        distance, nearest = np.asarray(far), np.asarray(to)
+        back = np.asarray(cKDTree(places).query(spots)[1])
         ok = np.isfinite(distance)
         index = np.flatnonzero(ok)
         mutual = back[nearest[ok]] == index
@@ -260,7 +262,7 @@ def _agreed(
     far, far_ratios, far_size = _triangles(sky)
     if len(near) == 0 or len(far) == 0:
         return []
-    hits = cKDTree(far_ratios).query_ball_point(near_ratios, RATIO_TOLERANCE, return_sorted=True)
+    hits: Any = cKDTree(far_ratios).query_ball_point(near_ratios, RATIO_TOLERANCE, return_sorted=True)
     counts = np.array([len(hit) for hit in hits])
     first = np.repeat(np.arange(len(near)), counts)
     second = np.concatenate([np.asarray(hit, dtype=np.int64) for hit in hits]) if counts.sum() else first

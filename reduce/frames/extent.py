@@ -9,10 +9,11 @@ from __future__ import annotations
 import gzip
 import math
 import os
+import zlib
 from collections.abc import Iterator
 from dataclasses import dataclass
 from pathlib import Path
-from typing import IO
+from typing import BinaryIO
 
 from reduce.records import FrameError
 
@@ -45,46 +46,30 @@ class DeclaredUnit:
         )
 
 
-def open_unpacked(path: Path) -> IO[bytes]:
-    """The file's bytes, through gzip when it is packed whole.
-
-    Raises
-    ------
-    FrameError
-        The file cannot be opened.
-    """
-    try:
-        file = open(path, "rb")  # noqa: SIM115
-        magic = file.read(2)
-        file.seek(0)
-    except OSError as error:
-        raise FrameError(cannot_read(error)) from error
-    return gzip.open(file) if magic == _GZIP_MAGIC else file  # type: ignore[return-value]
-
-
-def declared_units(path: Path) -> tuple[list[DeclaredUnit], int]:
-    """Headers of a file, and the bytes it really holds.
+def declared_units(path: Path) -> list[DeclaredUnit]:
+    """Headers of a file, after checking that their data are all there.
 
     Raises
     ------
     FrameError
         Empty, not FITS, cut short, packed badly, or declaring what no camera makes; in one sentence.
     """
-    with open_unpacked(path) as file:
-        try:
-            packed = isinstance(file, gzip.GzipFile)
-            size = 0 if packed else os.fstat(file.fileno()).st_size
-            if not packed and size == 0:
+    try:
+        with open(path, "rb") as file:
+            size = os.fstat(file.fileno()).st_size
+            if size == 0:
                 raise FrameError("the file is empty (0 bytes); copy it again.")
-            if os.path.isdir(path):
-                raise FrameError("this is a folder, not a file.")
-            units = list(_walk(file, None if packed else size))
-            return units, units[-1].end if packed else size
-        except (OSError, EOFError, gzip.zlib.error) as error:  # type: ignore[attr-defined]
-            raise FrameError(cannot_read(error)) from error
+            packed = file.read(2) == _GZIP_MAGIC
+            file.seek(0)
+            if not packed:
+                return list(_walk(file, size))
+            with gzip.open(file) as unpacked:
+                return list(_walk(unpacked, None))
+    except (OSError, EOFError, zlib.error) as error:
+        raise FrameError(cannot_read(error)) from error
 
 
-def _walk(file: IO[bytes], size: int | None) -> Iterator[DeclaredUnit]:
+def _walk(file: BinaryIO | gzip.GzipFile, size: int | None) -> Iterator[DeclaredUnit]:
     position = 0
     while size is None or position < size:
         cards = _read_header(file, first=position == 0)
@@ -105,7 +90,7 @@ def _walk(file: IO[bytes], size: int | None) -> Iterator[DeclaredUnit]:
             file.seek(position)
 
 
-def _read_header(file: IO[bytes], first: bool) -> dict[str, str] | None:
+def _read_header(file: BinaryIO | gzip.GzipFile, first: bool) -> dict[str, str] | None:
     """Cards of the next header as raw text; None when the file ends, or what follows is padding."""
     cards: dict[str, str] = {}
     for n in range(MOST_HEADER_BLOCKS):
@@ -126,7 +111,7 @@ def _read_header(file: IO[bytes], first: bool) -> dict[str, str] | None:
     raise FrameError("the header has no end; the file is damaged, copy it again.")
 
 
-def _skip_packed(file: IO[bytes], n_bytes: int, end: int) -> None:
+def _skip_packed(file: BinaryIO | gzip.GzipFile, n_bytes: int, end: int) -> None:
     left = n_bytes
     while left > 0:
         got = len(file.read(min(left, 1 << 20)))

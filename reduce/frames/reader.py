@@ -68,7 +68,7 @@ def open_frame(path: Path, settings: Settings) -> Frame:
     FrameError
         The file cannot be used; one sentence says why and what to do.
     """
-    units, _ = declared_units(path)
+    units = declared_units(path)
     images = [n for n, unit in enumerate(units) if _is_flat(unit.shape)]
     if not images:
         raise FrameError(_why_no_image([unit.shape for unit in units if unit.shape]))

@@ -26,9 +26,7 @@ def pixel_variance(
     return dark_e_px + read_noise_e**2 + digitisation_e**2 + master_variance_e2
 
 
-def aperture_variance(
-    photons_e: T, readout_e2: T, area_px: T, sky_err_e_px: T, flat_e2: T | float = 0.0
-) -> T:
+def aperture_variance(photons_e: T, readout_e2: T, area_px: T, sky_err_e_px: T, flat_e2: T | float = 0.0) -> T:
     """Variance of an aperture's flux, electrons².
 
     The CCD equation of Merline & Howell (1995, Exp. Astron. 6, 163) with the terms already summed over the pixels,

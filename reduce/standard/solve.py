@@ -157,6 +157,8 @@ class _Group:
         }.get(band, 0.0)
         self.airmass = np.array([np.nan if f.quality.airmass is None else f.quality.airmass for f in frames])
         self.verdicts: dict[str, FrameVerdict] = {}
+        self.speaking = np.ones(len(frames), bool)
+        """Frames that say something about the stars: the kept ones, where there are any."""
         self._take_stars()
 
     def _take_stars(self) -> None:
@@ -193,6 +195,7 @@ class _Group:
         now = states == "kept" if (states == "kept").any() else states != "dropped"
         if not np.array_equal(now, informs):
             joint = self._joint(now)
+        self.speaking = now
         return self._system(joint, now), joint
 
     def _joint(self, informs: NDArray[np.bool_]) -> JointSolution:

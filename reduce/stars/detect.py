@@ -57,7 +57,7 @@ def detect(data_e: Image, mask: Mask, *, saturation_e: float, max_stars: int = 5
     cuts = cut_out(clean, x, y, half, 0.0)
     flux = np.where(near, cuts, 0.0).sum(axis=(1, 2)).astype(float)
     peak = np.where(near, cuts, -np.inf).max(axis=(1, 2)).astype(float) if len(x) else np.zeros(0)
-    full = (np.where(near, cut_out(saturated, x, y, half, False), False)).any(axis=(1, 2))
+    full: NDArray[np.bool_] = (near & cut_out(saturated, x, y, half, False)).any(axis=(1, 2))
     order = np.lexsort((y, x, -flux))
     order = order[flux[order] > 0][:max_stars]
     return Detections(
@@ -145,9 +145,9 @@ def _moments(clean: Image, x: Floats, y: Floats, fwhm_px: float) -> _Shapes:
     for _ in range(MOMENT_ROUNDS):
         det = xx * yy - xy**2
         dx, dy = gx - cx[:, None, None], gy - cy[:, None, None]
-        exponent = (
-            yy[:, None, None] * dx**2 + xx[:, None, None] * dy**2 - 2 * xy[:, None, None] * dx * dy
-        ) / det[:, None, None]
+        exponent = (yy[:, None, None] * dx**2 + xx[:, None, None] * dy**2 - 2 * xy[:, None, None] * dx * dy) / det[
+            :, None, None
+        ]
         light = cuts * np.exp(-0.5 * np.minimum(exponent, 60.0))
         total = light.sum(axis=(1, 2))
         safe = np.where(total > 0, total, np.inf)

@@ -18,13 +18,22 @@ GOOD = {"IMAGETYP": "Light Frame", "DATE-OBS": "2024-03-10T23:59:50", "EXPTIME":
 MID = 60380.0002315
 
 
-def read(cards: dict, comments: dict | None = None, name: str = "a.fits", settings: Settings | None = None) -> FrameInfo:
+def read(
+    cards: dict, comments: dict | None = None, name: str = "a.fits", settings: Settings | None = None
+) -> FrameInfo:
     return understand(Header(cards, comments or {}), (100, 200), Path(name), settings or Settings())
 
 
 def test_a_plain_header_needs_no_note():
     info = read(GOOD)
-    assert (info.kind, info.band, info.filter_name, info.exposure_s, info.nx, info.ny) == ("light", "V", "V", 60.0, 200, 100)
+    assert (info.kind, info.band, info.filter_name, info.exposure_s, info.nx, info.ny) == (
+        "light",
+        "V",
+        "V",
+        60.0,
+        200,
+        100,
+    )
     assert info.mjd_mid == pytest.approx(MID, abs=1e-7)
     assert info.notes == ()
     unknown = (info.ra_deg, info.dec_deg, info.scale_arcsec, info.gain_e_per_adu, info.read_noise_e, info.temperature_c)
@@ -33,7 +42,6 @@ def test_a_plain_header_needs_no_note():
 
 # ---- time ------------------------------------------------------------------------------------------------
 
-START = {"DATE-OBS": None, "EXPTIME": 60.0}
 TIMES = [
     ({"DATE-OBS": "2024-03-10T23:59:50"}, {}, MID, ""),
     ({"DATE-OBS": "2024-03-10T23:59:50.000Z"}, {}, MID, "ends in Z"),
@@ -65,12 +73,7 @@ TIMES = [
 @pytest.mark.parametrize(("cards", "comments", "mjd", "note"), TIMES)
 def test_times_that_are_understood(cards, comments, mjd, note):
     info = read({"IMAGETYP": "light", "FILTER": "V", "EXPTIME": 60.0, **cards}, comments)
-    # A stated TT on the day before a conversion: leap seconds do not change here
-    expected = mjd if "TIMESYS" not in cards or cards["TIMESYS"] == "UT1" else mjd + 37.0 / 86400.0 * 0
-    if cards.get("TIMESYS") in ("TAI", "TT", "GPS"):
-        # all three rows begin at 23:59:50 UTC; the shift is checked against the published leap second count
-        expected = MID
-    assert info.mjd_mid == pytest.approx(expected, abs=2e-7)
+    assert info.mjd_mid == pytest.approx(mjd, abs=2e-7)
     assert (note in " ".join(info.notes)) if note else not info.notes
 
 
@@ -84,7 +87,7 @@ REFUSED = [
     ({"DATE-OBS": "2024-03-10T23:59:50", "TIMESYS": "MST"}, {}, "MST"),
     ({"DATE-OBS": "2024-03-10T16:59:50", "MJD-OBS": 60379.99988426}, {}, "7.00 hours apart"),
     ({"DATE-OBS": "2024-03-10"}, {}, "no time of day"),
-    ({"DATE-OBS": "2024-03-10T25:59:50"}, {}, "cannot be read"),
+    ({"DATE-OBS": "2024-03-10T25:59:50"}, {}, "no time of day that can be read"),
     ({"DATE-OBS": "2024-02-30T23:59:50"}, {}, "not a date"),
     ({"DATE-OBS": "03/10/2024", "UT": "23:59:50"}, {}, "not a date"),
     ({"DATE-OBS": "yesterday"}, {}, "not a date"),
@@ -147,7 +150,9 @@ def test_a_position_of_another_equinox_is_precessed():
     from astropy.coordinates import FK5, SkyCoord
 
     info = read({**GOOD, "RA": "12 34 56.7", "DEC": "+45 30 15", "EQUINOX": 2024.5})
-    theirs = SkyCoord(188.73625 * u.deg, 45.504167 * u.deg, frame=FK5(equinox="J2024.5")).transform_to(FK5())
+    theirs = SkyCoord(188.73625 * u.deg, 45.504167 * u.deg, frame=FK5(equinox="J2024.5")).transform_to(
+        FK5(equinox="J2000")
+    )
     assert info.ra_deg == pytest.approx(theirs.ra.deg, abs=2e-5)
     assert info.dec_deg == pytest.approx(theirs.dec.deg, abs=2e-5)
     assert "equinox 2024.5" in info.notes[0]

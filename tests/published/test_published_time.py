@@ -6,8 +6,8 @@ import numpy as np
 import pytest
 
 from reduce.almanac.times import bjd_tdb, hjd_utc, light_time_s, mid_exposure_mjd, mjd_to_jd, tt_minus_utc_s
-from reduce.frames.header import Header
 from reduce.frames.dialect import built_in_dialect
+from reduce.frames.header import Header
 from reduce.frames.observed_time import mid_time
 from reduce.settings import Site
 

@@ -1,0 +1,1 @@
+"""Lets the files of this folder import frame_files."""
