@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import argparse
+import os
 import sys
 from collections.abc import Callable
 from pathlib import Path
@@ -13,13 +14,14 @@ from demo_frames.detector import Raw, make_detector
 from demo_frames.files_on_disk import header, observatory_toml, write_comparison, write_frame
 from demo_frames.light_frame import Conditions, Scene, colour, draw_conditions, host_position, take_light
 from demo_frames.scenario import Scenario, read_scenario
-from demo_frames.schedule import Exposure, all_exposures, frame_path
+from demo_frames.schedule import SECONDS_PER_DAY, Exposure, all_exposures, frame_path
 from demo_frames.star_field import StarField, draw_star_field
 from demo_frames.supernova import draw_supernova
 from demo_frames.truth import FrameTruth, StarTruth, Truth, read_truth, write_truth
 
 __all__ = ["Truth", "read_truth", "render"]
 
+UNIX_EPOCH_MJD = 40587.0
 OTHER_FIELD = 1_000_003
 """Added to the seed for the stars of the frame that shows another field."""
 
@@ -73,6 +75,8 @@ def render(
             raw, claimed = _take_calibration(scene, exposure, rng), (0.0, 0.0)
         cards = header(scenario, exposure, claimed, rng)
         write_frame(folder / "frames" / path, raw, cards, exposure.fault.name if exposure.fault else "")
+        written = (exposure.start_mjd - UNIX_EPOCH_MJD) * SECONDS_PER_DAY + exposure.exposure_s
+        os.utime(folder / "frames" / path, (written, written))
         if progress:
             progress(count, len(exposures))
     truth = _truth(scene, seed, scatter, tuple(frames))

@@ -34,6 +34,7 @@ from reduce.records import (
     FieldSolution,
     FrameError,
     FrameInfo,
+    Image,
     Measured,
     Quality,
     Sequence,
@@ -112,10 +113,11 @@ def measure_frame(path: Path, frame: str, recipe: Recipe) -> Measured:
         opened = open_frame(path, recipe.settings)
         info = opened.info
         _require(info)
-        image = calibrate(opened.read(), info, recipe.masters, recipe.settings)
+        adu = opened.read()
+        image = calibrate(adu, info, recipe.masters, recipe.settings)
     except FrameError as error:
         return Measured(frame, digest, "unreadable", str(error), info, seconds=time.perf_counter() - start)
-    result = _measure_image(Measured(frame, digest, "measured", "", info), image, info, recipe)
+    result = _measure_image(Measured(frame, digest, "measured", "", info), adu, image, info, recipe)
     return replace(result, seconds=time.perf_counter() - start)
 
 
@@ -132,7 +134,7 @@ def _require(info: FrameInfo) -> None:
         raise FrameError("the header states no exposure time.")
 
 
-def _measure_image(blank: Measured, image: CalibratedImage, info: FrameInfo, recipe: Recipe) -> Measured:
+def _measure_image(blank: Measured, adu: Image, image: CalibratedImage, info: FrameInfo, recipe: Recipe) -> Measured:
     detections = detect(image.data_e, image.mask, saturation_e=image.saturation_e)
     hint = FieldHint(ra_deg=info.ra_deg, dec_deg=info.dec_deg, scale_arcsec=_scale(info, recipe.settings))
     stars = recipe.astrometric
@@ -141,7 +143,7 @@ def _measure_image(blank: Measured, image: CalibratedImage, info: FrameInfo, rec
     if match.solution is None:
         quality = _quality(image, detections, fwhm_px, info, None, None, recipe.settings)
         return replace(blank, outcome="no match", reason=match.reason, quality=quality)
-    table = _measure_stars(image, detections, fwhm_px, match.solution, info, recipe)
+    table = _measure_stars(adu, image, detections, fwhm_px, match.solution, recipe)
     growth_mag, growth_err_mag = growth_curve(table)
     ny, nx = image.data_e.shape
     ra_deg, dec_deg = pixel_to_sky(match.solution, np.array([(nx - 1) / 2]), np.array([(ny - 1) / 2]))
@@ -166,11 +168,11 @@ def _scale(info: FrameInfo, settings: Settings) -> float | None:
 
 
 def _measure_stars(
+    adu: Image,
     image: CalibratedImage,
     detections: Detections,
     fwhm_px: float,
     solution: FieldSolution,
-    info: FrameInfo,
     recipe: Recipe,
 ) -> NDArray[Any]:
     """Field stars at their centroids and targets at their one forced position, as STAR_DTYPE rows."""
@@ -181,19 +183,23 @@ def _measure_stars(
     target_x, target_y = sky_to_pixel(solution, target_ra, target_dec)
     inside = (target_x > margin) & (target_x < nx - 1 - margin) & (target_y > margin) & (target_y < ny - 1 - margin)
 
-    x, y, _, _ = centroid(image.data_e, detections.x_px, detections.y_px, fwhm_px)
+    x, y, _, found = centroid(image.data_e, detections.x_px, detections.y_px, fwhm_px)
     # The target's own detection is not a field star: its forced position stands for it.
     away = np.ones(len(x), bool)
     for tx, ty in zip(target_x[inside], target_y[inside], strict=True):
         away &= np.hypot(x - tx, y - ty) > fwhm_px
-    x, y = x[away][:MOST_STARS], y[away][:MOST_STARS]
+    x, y, found = x[away][:MOST_STARS], y[away][:MOST_STARS], found[away][:MOST_STARS]
     all_x = np.concatenate([x, target_x[inside]])
     all_y = np.concatenate([y, target_y[inside]])
     neighbours = np.column_stack([
         np.concatenate([detections.x_px, target_x[inside]]),
         np.concatenate([detections.y_px, target_y[inside]]),
     ])  # fmt: skip
-    table = measure_stars(image, all_x, all_y, fwhm_px, solution.scale_arcsec, neighbours)
+    table = measure_stars(
+        image, all_x, all_y, fwhm_px, solution.scale_arcsec, neighbours,
+        centred=np.concatenate([found, np.zeros(int(inside.sum()), bool)]), raw_adu=adu,
+        linear_limit_adu=recipe.settings.camera.linear_limit_adu,
+    )  # fmt: skip
     table["ra_deg"], table["dec_deg"] = pixel_to_sky(solution, all_x, all_y)
     for row, k in enumerate(np.flatnonzero(inside), start=len(x)):
         table["role"][row] = 1

@@ -101,7 +101,7 @@ class CalibratedImage:
 
     data_e: Image
     variance_e2: Image
-    """(ny, nx) electrons²: read noise² + dark current + noise of the masters; no photon noise of sky or star."""
+    """(ny, nx) electrons²: read noise², rounding, dark current, noise of the masters; no photons of sky or star."""
     mask: Mask
     """(ny, nx) PixelFlag bits."""
     flat_used: bool

@@ -18,8 +18,12 @@ def complaints(result: dict) -> list[str]:
     for band, row in result["photometry"].items():
         if abs(row["mean_offset"]) > 0.005:
             found.append(f"{band}: mean offset {row['mean_offset']}")
-        if not 0.7 <= row["chi2_reduced"] <= 1.4:
-            found.append(f"{band}: nightly chi2 {row['chi2_reduced']}")
+    # Twelve nights of one band scatter by 0.4 in reduced chi2 even when all is well: the bands are taken together
+    # here, and tests/demo_seeds.py judges each band over twenty seeds.
+    rows = result["photometry"].values()
+    chi2 = sum(row["chi2_reduced"] * row["n"] for row in rows) / max(sum(row["n"] for row in rows), 1)
+    if not 0.7 <= chi2 <= 1.4:
+        found.append(f"nightly chi2 {chi2:.2f}")
     if sorted(result["photometry"]) != ["B", "I", "R", "V"]:
         found.append(f"bands {sorted(result['photometry'])}")
     return found

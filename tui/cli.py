@@ -385,9 +385,7 @@ def demo(seed: int, scatter: bool, headless: bool, as_json: bool, folder: Path |
     place = folder or Path(f"fadeline-demo-{seed}{'-scatter' if scatter else ''}")
     campaign_folder = prepare_demo(place, seed, scatter, _progress)
     if not headless:
-        from tui.live import run_app
-
-        run_app(campaign_folder)
+        _watch_demo(place, campaign_folder)
         return
     result = report_demo(place, campaign_folder, workers, _progress)
     if as_json:
@@ -406,6 +404,21 @@ def demo(seed: int, scatter: bool, headless: bool, as_json: bool, folder: Path |
             f"{band}: offset {1000 * row['mean_offset']:+.1f} mmag, χ²/n {row['chi2_reduced']:.2f}, n {row['n']}"
         )
     click.echo(f"{result['seconds']:.0f} s; open it with: fadeline open {campaign_folder}")
+
+
+def _watch_demo(place: Path, campaign_folder: Path) -> None:
+    """Open the app while the demo's nights land one after the other."""
+    import threading
+
+    from tui.demo import deliver_nights
+    from tui.live import run_app
+
+    stop = threading.Event()
+    threading.Thread(target=deliver_nights, args=(place, stop), daemon=True).start()
+    try:
+        run_app(campaign_folder)
+    finally:
+        stop.set()
 
 
 if __name__ == "__main__":

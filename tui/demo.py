@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import threading
 import time
 from collections import defaultdict
 from collections.abc import Callable, Sequence
@@ -15,6 +16,10 @@ from reduce.campaign.door import Campaign
 from reduce.plain_text import PlainError
 from reduce.records import Point, Target
 from reduce.version import version
+
+
+NIGHT_EVERY_S = 6.0
+"""In the app, one of the campaign's nights lands in this time."""
 
 
 class DemoError(PlainError):
@@ -40,6 +45,8 @@ def prepare_demo(place: Path, seed: int, scatter: bool, progress: Callable[[str]
         raise DemoError(f"{place} is not empty and holds no demo: choose another --folder.")
     else:
         truth = render(place, seed, scatter, lambda done, n: progress(f"rendering frame {done} of {n}"))
+        (place / "frames").rename(place / "to-come")
+        (place / "frames").mkdir()
         progress("")
     Campaign.create(
         campaign_folder,
@@ -49,6 +56,21 @@ def prepare_demo(place: Path, seed: int, scatter: bool, progress: Callable[[str]
         settings_text=(place / "observatory.toml").read_text(encoding="utf-8"),
     )
     return campaign_folder
+
+
+def deliver_night(place: Path) -> bool:
+    """Let the next night's frames land in the frames folder; False when all have landed."""
+    nights = sorted((place / "to-come").iterdir()) if (place / "to-come").exists() else []
+    if not nights:
+        return False
+    nights[0].rename(place / "frames" / nights[0].name)
+    return True
+
+
+def deliver_nights(place: Path, stop: threading.Event) -> None:
+    """Let one night after the other land until all have, or until stopped; for a thread beside the app."""
+    while not stop.is_set() and deliver_night(place):
+        stop.wait(NIGHT_EVERY_S)
 
 
 def _target(truth: Truth) -> Target:
@@ -66,8 +88,12 @@ def report_demo(
     start = time.monotonic()
     truth = read_truth(place)
     campaign = Campaign.open(campaign_folder)
-    for _ in campaign.reduce(workers=workers, progress=progress):
-        pass
+    # Two evenings by themselves, so that the second brings flats that the first had to do without; then the rest.
+    for evenings in (1, 1, len(truth.frames)):
+        for _ in range(evenings):
+            deliver_night(place)
+        for _ in campaign.reduce(workers=workers, progress=progress):
+            pass
     picture = campaign.snapshot()
     rows = [row for row in picture.frames if row.kind == "light" or row.outcome == "unreadable"]
     targets = []

@@ -16,6 +16,11 @@ POINT_KEYS = (
     "flux_err", "state", "flags", "host_method", "zp_group", "provisional",
 )  # fmt: skip
 
+ESTIMATE_KEYS = (
+    "name", "mu", "mu_err", "mu_err_fit", "t_max", "t_max_err", "dm15", "dm15_err", "e_host", "e_host_err", "chi2",
+    "n", "warnings", "kind", "verdict", "scale", "budget", "peak_mag",
+)  # fmt: skip
+
 
 def without_nan(value: Any) -> Any:
     """The same value of lists, dicts, numbers and text, with None for numbers that are not finite."""
@@ -36,5 +41,6 @@ def point_to_json(point: Point) -> dict[str, Any]:
 
 
 def estimate_to_json(estimate: Estimate) -> dict[str, Any]:
-    """All fields of an estimate under their own names, warnings and budget as lists of objects."""
-    return {key: without_nan(value) for key, value in asdict(estimate).items()}
+    """The keys of ESTIMATE_KEYS; warnings and budget are lists of objects, curves and points are left out."""
+    row = {"name": estimate.target, **asdict(estimate)}
+    return {key: without_nan(row[key]) for key in ESTIMATE_KEYS}

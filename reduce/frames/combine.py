@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import numpy as np
+from numpy.typing import NDArray
 
 from reduce.records import Image
 
@@ -27,29 +28,35 @@ def combine(stack: Image) -> tuple[Image, Image]:
     mean, variance
         Mean (NaN where no value is left) and its single-value variance (NaN with fewer than two).
     """
-    with np.errstate(invalid="ignore", divide="ignore"):
+    with np.errstate(invalid="ignore", divide="ignore", over="ignore"):
         finite = np.isfinite(stack)
-        clean = finite.all()
-        values = stack if clean else np.where(finite, stack, np.nan)
-        kept = finite
-        if len(stack) > 2:
-            centre = _median(values, clean)
-            distance = np.abs(values - centre)
-            spread = MAD_TO_SIGMA * _median(distance, clean)
-            typical = np.nanmedian(spread) if np.isfinite(spread).any() else 0.0
-            kept = finite & ~(distance > CLIP_SIGMA * np.maximum(spread, typical))
-        n = kept.sum(axis=0)
-        total = np.where(kept, stack, 0.0).sum(axis=0, dtype=np.float64)
-        mean = np.where(n > 0, total / n, np.nan)
-        square = np.where(kept, (stack - mean) ** 2, 0.0).sum(axis=0, dtype=np.float64)
-        return mean.astype(np.float32), np.where(n > 1, square / (n - 1), np.nan).astype(np.float32)
+        mean, variance = _moments(stack, finite)
+        typical = np.float32(typical_sigma(variance, len(stack)) or 0.0)
+        # Where all values lie within 5 typical sigma of each other none is an outlier: few pixels need slow medians.
+        span = np.fmax.reduce(np.where(finite, stack, np.nan)) - np.fmin.reduce(np.where(finite, stack, np.nan))
+        suspect = span > CLIP_SIGMA * typical
+        if len(stack) > 2 and suspect.any():
+            values, known = stack[:, suspect], finite[:, suspect]
+            distance = np.abs(values - _median(values, known))
+            spread = np.maximum(MAD_TO_SIGMA * _median(distance, known), typical)
+            mean[suspect], variance[suspect] = _moments(values, known & ~(distance > CLIP_SIGMA * spread))
+        return mean, variance
 
 
-def _median(values: Image, clean: np.bool_) -> Image:
-    if clean:
+def _moments(stack: Image, kept: NDArray[np.bool_]) -> tuple[Image, Image]:
+    n = kept.sum(axis=0)
+    mean = np.where(n > 0, np.where(kept, stack, 0.0).sum(axis=0, dtype=np.float64) / n, np.nan)
+    square = np.where(kept, (stack - mean) ** 2, 0.0).sum(axis=0, dtype=np.float64)
+    return mean.astype(np.float32), np.where(n > 1, square / (n - 1), np.nan).astype(np.float32)
+
+
+def _median(values: Image, finite: NDArray[np.bool_]) -> Image:
+    if finite.all():
         return np.asarray(np.median(values, axis=0))
-    blank = ~np.isfinite(values).any(axis=0)
-    return np.asarray(np.where(blank, np.nan, np.nanmedian(np.where(blank, 0.0, values), axis=0)))
+    blank = ~finite.any(axis=0)
+    return np.asarray(
+        np.where(blank, np.nan, np.nanmedian(np.where(blank, 0.0, np.where(finite, values, np.nan)), axis=0))
+    )
 
 
 def typical_sigma(variance: Image, n: int) -> float | None:

@@ -7,6 +7,7 @@ import math
 import numpy as np
 from numpy.typing import ArrayLike
 
+from reduce.frames.combine import CLIP_SIGMA, MAD_TO_SIGMA
 from reduce.records import FrameInfo
 from reduce.settings import Settings
 
@@ -44,11 +45,12 @@ def read_noise_from_pair(bias_difference_sd_adu: float, gain_e_per_adu: float) -
 
 
 def pair_statistics(first: ArrayLike, second: ArrayLike) -> tuple[tuple[float, float], float]:
-    """Levels of two frames and the standard deviation of their difference, ADU, not moved by single odd pixels."""
+    """Levels of two frames and the standard deviation of their difference, ADU; single odd pixels are left out."""
     a, b = np.asarray(first, np.float64), np.asarray(second, np.float64)
     difference = a - b
-    low, high = np.percentile(difference, [15.865525393145708, 84.13447460685429])
-    return (float(np.median(a)), float(np.median(b))), float(high - low) / 2.0
+    off = np.abs(difference - np.median(difference))
+    inside = off <= CLIP_SIGMA * max(MAD_TO_SIGMA * float(np.median(off)), DIGITISATION_ADU)
+    return (float(np.median(a)), float(np.median(b))), float(np.std(difference[inside], ddof=1))
 
 
 def saturation_level(info: FrameInfo, settings: Settings) -> tuple[float, str]:

@@ -1,6 +1,6 @@
 """Masters on disk: built in blocks of rows, never more than one block of all inputs in memory.
 
-This is the door to all that concerns masters; grouping and choosing, which read nothing, are in `master_sets`.
+Grouping and choosing, which read nothing, are in `master_sets`.
 """
 
 from __future__ import annotations
@@ -23,7 +23,6 @@ from reduce.frames.master_sets import (
     Master,
     MasterPlan,
     choose_masters,
-    plan_masters,
     same_exposure,
 )
 from reduce.frames.reader import Frame, open_frame
@@ -31,10 +30,8 @@ from reduce.plain_text import clean_text
 from reduce.records import FrameError, Image
 from reduce.settings import Settings
 
-__all__ = ["ChosenMasters", "Master", "MasterPlan", "build_master", "choose_masters", "plan_masters"]
-
-BLOCK_PIXELS = 16_000_000
-"""Pixels of all inputs together that are in memory at once (64 MB)."""
+BLOCK_PIXELS = 4_000_000
+"""Pixels of all inputs together that are read at once (16 MB; combining them needs a few times as much)."""
 FLAT_RANGE = (0.10, 0.80)
 """Levels of a usable flat as fractions of saturation (common practice)."""
 LEVEL_SAMPLE = 250_000
@@ -150,7 +147,7 @@ def _flats(
         level = float(np.nanmedian((image - pedestal)[::step, ::step]))
         if FLAT_RANGE[0] <= fraction <= FLAT_RANGE[1] and level > 0:
             kept.append(frame)
-            prepare.append(_divide(pedestal, level))
+            prepare.append(_divide(lower, frame.info.exposure_s, level))
     if not kept:
         raise FrameError(
             f"{plan.label}: all {len(frames)} flats are at {100 * min(levels):.0f}–{100 * max(levels):.0f} % of "
@@ -158,28 +155,28 @@ def _flats(
         )
     if len(kept) < len(frames):
         notes.append(
-            f"{len(frames) - len(kept)} of {len(frames)} flats are outside 10–80 % of saturation and left out."
+            f"{len(frames) - len(kept)} of {len(frames)} flats are not at 10 to 80 % of saturation and left out."
         )
     return kept, prepare
 
 
-def _divide(pedestal: Image, level: float) -> Prepare:
-    return lambda rows, first, end: (rows - pedestal[first:end]) / np.float32(level)
+def _divide(lower: ChosenMasters, exposure_s: float | None, level: float) -> Prepare:
+    return lambda rows, first, end: (rows - pedestal_adu(lower, exposure_s, slice(first, end))) / np.float32(level)
 
 
-def pedestal_adu(chosen: ChosenMasters, exposure_s: float | None) -> Image:
-    """Bias level and dark signal to subtract from a frame of this exposure, ADU; needs a bias or a dark.
+def pedestal_adu(chosen: ChosenMasters, exposure_s: float | None, rows: slice = slice(None)) -> Image:
+    """Bias level and dark signal to subtract from (rows of) a frame of this exposure, ADU; needs a bias or a dark.
 
     Without a dark of the same exposure: bias + (dark - bias) t / t_dark.
     """
     if chosen.dark is not None and (chosen.bias is None or same_exposure(chosen.dark.exposure_s, exposure_s)):
-        return read_master(chosen.dark.path)
+        return read_master(chosen.dark.path)[rows]
     assert chosen.bias is not None
-    bias = read_master(chosen.bias.path)
+    bias = read_master(chosen.bias.path)[rows]
     if chosen.dark is None:
         return bias
     factor = np.float32(dark_factor(chosen, exposure_s))
-    return np.asarray(bias + (read_master(chosen.dark.path) - bias) * factor, dtype=np.float32)
+    return np.asarray(bias + (read_master(chosen.dark.path)[rows] - bias) * factor, dtype=np.float32)
 
 
 def dark_factor(chosen: ChosenMasters, exposure_s: float | None) -> float:

@@ -30,7 +30,7 @@ _CLOCK = re.compile(r"^(\d{1,2}):(\d{1,2})(?::(\d{1,2}(?:\.\d*)?))?$")
 _ZONE = re.compile(r"[+-]\d{1,2}:?\d{0,2}$|[A-Za-z]")
 _LOCAL = re.compile(r"\blocal\b|\bLT\b|\bLST\b|civil", re.IGNORECASE)
 _UTC = re.compile(r"\bU\.?T\.?C?\b|\bGMT\b|universal", re.IGNORECASE)
-_MIDDLE = re.compile(r"\bmid", re.IGNORECASE)
+_MIDDLE = re.compile(r"\bmid(?!night)", re.IGNORECASE)
 _END = re.compile(r"\b(at|of) (the )?end\b|\bend (of|time)\b|shutter clos", re.IGNORECASE)
 
 
@@ -105,6 +105,8 @@ def _instant(header: Header, keyword: str, words: Mapping[str, list[str]], notes
         mjd = _calendar(header, keyword, words, notes)
     else:
         mjd = header.number(keyword)
+        if mjd is not None and mjd == int(mjd):
+            return None  # a day's number, not a time
         if mjd is not None and mjd > LARGEST_MJD:
             mjd -= MJD_ZERO_JD
     if mjd is None:

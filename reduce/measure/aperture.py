@@ -9,7 +9,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from reduce.measure.crowding import neighbour_light
-from reduce.measure.noise import DIGITISATION_ADU, aperture_variance
+from reduce.measure.noise import aperture_variance
 from reduce.measure.sky import annulus_sky
 from reduce.records import (
     LADDER_ARCSEC,
@@ -158,8 +158,7 @@ def _measure_block(
     inside = _inside(x_px, y_px, half, nx, ny)
     empty = ~np.isfinite(light) | ~inside
     star = np.where(empty, 0.0, light - sky[:, None, None])
-    digitisation = (image.gain_e_per_adu * DIGITISATION_ADU) ** 2
-    readout = np.where(empty, 0.0, cut_out(image.variance_e2, x_px, y_px, half, 0.0) + digitisation)
+    readout = np.where(empty, 0.0, cut_out(image.variance_e2, x_px, y_px, half, 0.0))
     hit = _cosmic_rays(star, readout, np.maximum(sky, 0.0), fwhm_px) & inside
     causes = (
         (StarFlag.SATURATED, (mask & PixelFlag.SATURATED) > 0),

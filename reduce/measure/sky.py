@@ -75,10 +75,15 @@ def annulus_sky(
         (n,) positions to measure.
     """
     rows, columns = _annulus(fwhm_px)
-    values, good = _pick(data_e, usable, x_px, y_px, rows, columns)
-    _, clear = _pick(data_e, without_neighbours(usable, neighbours_xy, fwhm_px), x_px, y_px, rows, columns)
-    enough = clear.sum(axis=1) >= ENOUGH_PX
-    good = np.where(enough[:, None], clear, good)
+    ny, nx = data_e.shape
+    y = np.rint(y_px).astype(int)[:, None] + rows
+    x = np.rint(x_px).astype(int)[:, None] + columns
+    inside = (y >= 0) & (y < ny) & (x >= 0) & (x < nx)
+    pixel = np.where(inside, y * nx + x, 0)
+    good = inside & usable.ravel()[pixel]
+    clear = inside & without_neighbours(usable, neighbours_xy, fwhm_px).ravel()[pixel]
+    good = np.where(clear.sum(axis=1, keepdims=True) >= ENOUGH_PX, clear, good)
+    values = np.where(good, data_e.ravel()[pixel], 0.0).astype(float)
     return _planes(values, good, rows, columns, x_px - np.rint(x_px), y_px - np.rint(y_px))
 
 
@@ -93,24 +98,6 @@ def _ring(inner_px: float, outer_px: float) -> tuple[NDArray[np.int64], NDArray[
 def _annulus(fwhm_px: float) -> tuple[NDArray[np.int64], NDArray[np.int64]]:
     inner, outer = INNER_FWHM * fwhm_px, OUTER_FWHM * fwhm_px
     return _ring(inner, max(outer, (LEAST_PX / np.pi + inner**2) ** 0.5 + 1.0))
-
-
-def _pick(
-    data_e: Image,
-    usable: NDArray[np.bool_],
-    x_px: Floats,
-    y_px: Floats,
-    rows: NDArray[np.int64],
-    columns: NDArray[np.int64],
-) -> tuple[Floats, NDArray[np.bool_]]:
-    """(n, m) values of the annulus pixels and whether each counts."""
-    ny, nx = data_e.shape
-    y = np.rint(y_px).astype(int)[:, None] + rows
-    x = np.rint(x_px).astype(int)[:, None] + columns
-    inside = (y >= 0) & (y < ny) & (x >= 0) & (x < nx)
-    y, x = np.clip(y, 0, ny - 1), np.clip(x, 0, nx - 1)
-    good = inside & usable[y, x]
-    return np.where(good, data_e[y, x], 0.0).astype(float), good
 
 
 def _planes(

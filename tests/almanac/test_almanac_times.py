@@ -49,7 +49,7 @@ def test_the_far_future_needs_no_network_and_does_not_warn(mjd: float):
 
 
 def test_import_is_light():
-    code = "import sys, reduce.almanac.times as t; t.bjd_tdb(60000.0, 1.0, 2.0, None); print('astropy.time' in sys.modules)"
+    code = "import sys, reduce.almanac.times as t; t.bjd_tdb(60000.0, 1.0, 2.0, None); print('astropy' in sys.modules)"
     done = subprocess.run([sys.executable, "-c", code], capture_output=True, text=True, check=True)
     assert done.stdout.strip() == "False"
 

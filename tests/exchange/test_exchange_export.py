@@ -12,7 +12,7 @@ from hypothesis import given
 from hypothesis import strategies as st
 
 from reduce.exchange.export import ExportError, write_points
-from reduce.exchange.point_json import POINT_KEYS, estimate_to_json, point_to_json
+from reduce.exchange.point_json import ESTIMATE_KEYS, POINT_KEYS, estimate_to_json, point_to_json
 from reduce.records import BudgetLine, Caution, Estimate, FitCurve, Point, Target
 
 NIGHT = Point(
@@ -150,10 +150,11 @@ def test_estimate_json_has_no_nan():
         target="SN demo", kind="type_ia", mu=33.0, mu_err=0.1, mu_err_fit=math.nan, t_max=61000.0, t_max_err=0.1,
         dm15=1.1, dm15_err=0.1, e_host=None, e_host_err=None, chi2=3.0, n=9, verdict="μ stands", scale="x",
         warnings=(Caution("late", "why"),), budget=(BudgetLine("fit", 0.1),),
-        curves=(FitCurve("V", np.array([1.0]), np.array([np.nan]), np.array([0.1])),), peak_mag={"B": 15.0},
+        curves=(FitCurve("V", np.array([1.0]), np.array([np.nan]), np.array([0.1])),), peak_mag={"B": math.inf},
     )  # fmt: skip
     row = estimate_to_json(estimate)
     assert json.loads(json.dumps(row, allow_nan=False)) == row
     assert row["mu_err_fit"] is None
     assert row["warnings"] == [{"name": "late", "evidence": "why"}]
-    assert row["curves"][0]["mag"] == [None]
+    assert row["peak_mag"] == {"B": None}
+    assert tuple(row) == ESTIMATE_KEYS

@@ -1,4 +1,4 @@
-"""Files as real nights leave them: each unusable one gives one sentence, none costs memory, none raises anything else."""
+"""Files as real nights leave them: an unusable one gives one sentence, costs no memory and raises nothing else."""
 
 from __future__ import annotations
 

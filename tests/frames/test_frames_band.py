@@ -13,8 +13,9 @@ from reduce.settings import Settings
 
 NAMES = [
     ("B", "B"), ("V", "V"), ("R", "R"), ("I", "I"), ("g", "g"), ("r", "r"), ("i", "i"),
-    ("Bessell V", "V"), ("Bessell-B", "B"), ("V Bessell", "V"), ("bessel r", "R"), ("Johnson V", "V"), ("JohnsonV", "V"),
-    ("Johnson-Cousins R", "R"), ("Cousins I", "I"), ("R (Cousins)", "R"), ("I_Cousins", "I"), ("Rc", "R"), ("Ic", "I"),
+    ("Bessell V", "V"), ("Bessell-B", "B"), ("V Bessell", "V"), ("bessel r", "R"), ("Johnson V", "V"),
+    ("JohnsonV", "V"),
+     ("Johnson-Cousins R", "R"), ("Cousins I", "I"), ("R (Cousins)", "R"), ("I_Cousins", "I"), ("Rc", "R"), ("Ic", "I"),
     ("R_c", None), ("Johnson v", "V"), ("Kron-Cousins R", "R"), ("Harris B", "B"), ("V band", "V"), ("Filter V", "V"),
     ("V filter", "V"), ("2: V", "V"), ("#3 Rc", "R"), ("V-band (Bessell)", "V"),
     ("g'", "g"), ("r'", "r"), ("i'", "i"), ("gp", "g"), ("rp", "r"), ("ip", "i"), ("r prime", "r"), ("SDSS g", "g"),
@@ -34,7 +35,7 @@ def test_band_from_name(name, band):
 
 
 def info_of(cards, filters=None):
-    cards = {"IMAGETYP": "light", "EXPTIME": 1.0, "MJD-OBS": 60000.0, **cards}
+    cards = {"IMAGETYP": "light", "EXPTIME": 1.0, "MJD-OBS": 60000.25, **cards}
     return understand(Header(cards), (10, 10), Path("a.fits"), Settings(filters=filters or {}))
 
 

@@ -65,6 +65,8 @@ TIMES = [
     ({"DATE-OBS": "2024-03-11T00:00:08", "TIMESYS": "GPS"}, {}, MID, "from GPS to UTC (-18.000 s)"),
     ({"DATE-OBS": "2024-03-10T23:59:50", "TIMESYS": "UT1"}, {}, MID, ""),
     ({"DATE-OBS": "2024-03-10T23:59:50", "JD": 2460380.499884}, {}, MID, ""),
+    ({"DATE-OBS": "2024-03-10T23:59:50", "MJD": 60379, "JD": 2460380.0}, {}, MID, ""),
+    ({"DATE-OBS": "2024-03-10T23:59:50"}, {"DATE-OBS": "UTC, seconds from midnight"}, MID, ""),
     # local time in one keyword, UTC in another: the UTC one is used
     ({"DATE-OBS": "2024-03-10T16:59:50", "MJD-OBS": 60379.99988426}, {"DATE-OBS": "local time"}, MID, "local time"),
 ]  # fmt: skip
@@ -92,7 +94,8 @@ REFUSED = [
     ({"DATE-OBS": "03/10/2024", "UT": "23:59:50"}, {}, "not a date"),
     ({"DATE-OBS": "yesterday"}, {}, "not a date"),
     ({"DATE-OBS": "0001-01-01T00:00:00"}, {}, "camera's clock"),
-    ({"MJD-OBS": 0.0}, {}, "camera's clock"),
+    ({"MJD-OBS": 0.5}, {}, "camera's clock"),
+    ({"MJD-OBS": 0.0}, {}, "no time of observation"),
     ({"LOCTIME": "2024-03-10T16:59:50"}, {}, "no time of observation"),
     ({}, {}, "no time of observation"),
 ]
@@ -272,7 +275,8 @@ def test_escape_codes_do_not_pass():
 
 TEXT = st.text(max_size=70)
 VALUE = st.one_of(TEXT, st.integers(), st.floats(), st.booleans(), st.none())
-WORDS = sorted({word for words in built_in_dialect().keywords.values() for word in words}) + [
+WORDS = [
+    *sorted({word for words in built_in_dialect().keywords.values() for word in words}),
     "DATE-OBS", "TIME-OBS", "UT", "TIMESYS", "MJD-OBS", "JD", "RA", "DEC", "OBJCTRA", "OBJCTDEC", "CTYPE1", "CDELT1",
 ]  # fmt: skip
 

@@ -48,7 +48,7 @@ def test_mid_exposure_rolls_over_midnight():
 
 
 BARYCENTRIC = [
-    # BJD-01..04: definition by Eastman, Siverd & Gaudi 2010 (PASP 122, 935), computed with the ERFA ephemeris in astropy
+    # BJD-01..04: definition of Eastman, Siverd & Gaudi 2010 (PASP 122, 935), computed with astropy's ERFA ephemeris
     (210.7740, 54.2737, "2011-09-10T03:00:00", 2455814.622870, 2455814.622093, -250.22, -251.12),
     (215.5876, -0.3938, "2007-03-14T09:00:00", 2454173.880010, 2454173.879278, 367.66, 369.63),
     (0.0, 0.0, "2010-09-23T06:00:00", 2455462.756537, 2455462.755796, 498.66, 500.75),
