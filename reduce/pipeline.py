@@ -234,14 +234,16 @@ def _quality(
         )
     bright = slice(0, 50)
     angles = np.exp(2j * np.radians(detections.position_angle_deg[bright]))
-    sky = table["sky_e_px"] if table is not None and len(table) else image.data_e[::8, ::8]
-    sigma = table["sky_sigma_e_px"] if table is not None and len(table) else np.array([np.nan])
+    if table is not None and np.isfinite(table["sky_e_px"]).any():
+        sky, sigma = float(np.nanmedian(table["sky_e_px"])), float(np.nanmedian(table["sky_sigma_e_px"]))
+    else:
+        sky, sigma = float(np.nanmedian(image.data_e[::8, ::8])), float("nan")
     return Quality(
         fwhm_px=fwhm_px,
         elongation=float(np.median(detections.elongation[bright])) if len(detections) else float("nan"),
         trail_agreement=float(abs(angles.mean())) if len(detections) else 0.0,
-        sky_e_px=float(np.nanmedian(sky)),
-        sky_sigma_e_px=float(np.nanmedian(sigma)),
+        sky_e_px=sky,
+        sky_sigma_e_px=sigma,
         n_detected=len(detections),
         n_saturated=int(detections.saturated.sum()),
         exposure_s=info.exposure_s,

@@ -35,6 +35,7 @@ class FrameRow:
     """One frame as tables show it."""
 
     id: str
+    """SHA-256 of the file; of a file that cannot be read (kind "unknown"), its path."""
     file: str
     """Name without folder, escaped."""
     path: str

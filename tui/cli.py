@@ -54,7 +54,8 @@ def plainly(command: Callable[P, None]) -> Callable[P, None]:
 
 
 def _print_json(value: Any) -> None:
-    click.echo(json.dumps(value, allow_nan=False, ensure_ascii=False))
+    text = json.dumps(value, allow_nan=False, ensure_ascii=False)
+    click.echo(text.encode("utf-8", "replace").decode())  # a file name need not be text; JSON must be
 
 
 def _campaign(folder: Path) -> Campaign:

@@ -15,6 +15,8 @@ if TYPE_CHECKING:
     from reduce.views import TargetView
 
 BAR_WIDTH = 8
+WIDTH_FOR_NOTES = 60
+"""Columns from which the budget has room for more than names and numbers."""
 
 
 def modulus_text(view: TargetView | None) -> Text:
@@ -68,12 +70,12 @@ def budget_text(estimate: Estimate | None, width: int, plain: bool) -> Text:
         return Text("")
     total = sum(line.mag**2 for line in estimate.budget)
     lines = [Text("Error budget", "bold"), Text("  mag  share of the variance", "dim")]
-    for line in estimate.budget:
+    for line in sorted(estimate.budget, key=lambda line: -line.mag):
         share = line.mag**2 / total if total > 0 else 0.0
         bar = (("#" if plain else "█") * round(share * BAR_WIDTH)).ljust(BAR_WIDTH)
         figures = f"{line.mag:5.3f}  {bar} {100.0 * share:3.0f} %  "
         words = wrap(line.component, max(width - len(figures), 12))
-        notes = wrap(line.note, max(width - len(figures), 12))
+        notes = wrap(line.note, width - len(figures)) if width >= WIDTH_FOR_NOTES else []
         lines.append(Text.assemble(figures[:7], (bar, "#56b4e9"), figures[7 + BAR_WIDTH :], words[0] if words else ""))
         lines += [Text(" " * len(figures) + rest) for rest in words[1:]]
         lines += [Text(" " * len(figures) + rest, "dim") for rest in notes]

@@ -176,6 +176,17 @@ class Campaign:
         """Every readable frame of the logbook, by time."""
         return self.intake.known_frames()
 
+    def unused_files(self) -> list[str]:
+        """One sentence when files were read that are neither light nor calibration frames."""
+        names = [clean_text(frame.path.name) for frame in self.known_frames() if frame.info.kind == "unknown"]
+        if not names:
+            return []
+        files_are = "file is" if len(names) == 1 else "files are"
+        return [
+            f"{len(names)} {files_are} not used, being neither light nor calibration frames by header or name "
+            f"({names[0]}{', …' if len(names) > 1 else ''}); fadeline inspect says why."
+        ]
+
     def problems(self) -> dict[Path, str]:
         """Files that could not be used → why."""
         return {path: problem.sentence for path, problem in self.book.problems().items()}
@@ -222,7 +233,7 @@ class Campaign:
             points += solve(
                 self.measured(), self.sequence(), self.targets(), choices, self.settings, with_stars=True
             ).star_points
-        names = self.book.file_names()
+        names = {frame.id: clean_text(frame.path.name) for frame in self.known_frames()}
         stale = self._stale_frames()
         groups = {p.zp_group for p in solution.frame_points if p.file in stale and p.star == target}
         return [
@@ -303,9 +314,20 @@ class Campaign:
         progress: Callable[[str], None] = lambda text: None,
         should_stop: Callable[[], bool] = lambda: False,
     ) -> Iterator[Report]:
-        """Reduce what has landed, one report a batch; with ``follow`` until stopped. See `reducer.reduce_frames`."""
+        """Reduce what has landed, one report a batch; with ``follow`` until stopped. See `reducer.reduce_frames`.
+
+        Raises
+        ------
+        CampaignError
+            The frames folder is gone; with ``follow`` it is waited for.
+        """
         from reduce.campaign.reducer import reduce_frames
 
+        if not follow and not self.frames_folder.is_dir():
+            raise CampaignError(
+                f"The frames folder {clean_text(self.frames_folder, 300)} is not there; "
+                "mount its disk or put it back, what was measured is safe."
+            )
         return reduce_frames(self, follow, workers or os.cpu_count() or 1, progress, should_stop)
 
     def decide(self, subject: str, aspect: str, value: str, reason: str = "") -> LogRow:

@@ -3,9 +3,10 @@
 from __future__ import annotations
 
 import time
-from collections.abc import Callable, Iterable
+from collections.abc import Callable, Iterable, Mapping
 from dataclasses import asdict, dataclass, field
 from pathlib import Path
+from typing import Any
 
 from reduce.frames.arrival import Stamp, completeness, scan
 from reduce.frames.master_sets import ChosenMasters, Master, MasterPlan, choose_masters, plan_masters
@@ -60,6 +61,7 @@ class Intake:
         found = {path: stamp for path, stamp in scan(self.folder).items() if not self._is_reference(path)}
         changed = False
         self.waiting = {path: why for path, why in self.waiting.items() if path in found}
+        self._taken = {path: stamp for path, stamp in self._taken.items() if path in found}
         for path in self.book.problems().keys() - found.keys():
             self.book.add_problem(path, 0, 0, "")
             changed = True
@@ -106,24 +108,35 @@ class Intake:
         self._infos[path, *stamp] = opened.info
 
     def known_frames(self) -> list[KnownFrame]:
-        """Every frame of the logbook by time and id; a copy counts once, the path seen first stands for it."""
+        """Every frame of the logbook by time and id; a copy counts once.
+
+        Of a frame's paths the one seen first stands for it, or after a move the first where it still lies.
+        """
         found: dict[str, KnownFrame] = {}
-        measured: dict[str, FrameInfo] | None = None
+        remembered: dict[str, FrameInfo] | None = None
         for path, place in self.book.known_locations().items():
-            if place.frame in found or self._is_reference(path):
+            if self._is_reference(path) or (place.frame in found and found[place.frame].path.exists()):
+                continue
+            if place.frame in found and not path.exists():
                 continue
             key = (path, place.size, place.mtime_ns)
             if key not in self._infos:
                 self._infos[key] = self._read_info(path)
             info = self._infos[key]
             if info is None:
-                if measured is None:
-                    rows = self.book.newest_reductions()
-                    measured = {row.frame: row.info for row in rows if row.info is not None}
-                info = measured.get(place.frame)
+                if remembered is None:
+                    remembered = self._remembered()
+                info = remembered.get(place.frame)
             if info is not None:
                 found[place.frame] = KnownFrame(place.frame, path, info)
         return sorted(found.values(), key=lambda frame: (frame.info.mjd_mid or 0.0, frame.id))
+
+    def _remembered(self) -> dict[str, FrameInfo]:
+        """What the logbook knows of frames without their files: lights measured, calibration frames in a master."""
+        infos = {row.frame: row.info for row in self.book.newest_reductions() if row.info is not None}
+        for row in self.book.masters():
+            infos |= dict.fromkeys(row.inputs, _info_of_inputs(row.content))
+        return infos
 
     def _read_info(self, path: Path) -> FrameInfo | None:
         """What the file's header says now; None when the file is gone or no longer whole."""
@@ -135,8 +148,21 @@ class Intake:
     # ---- masters -----------------------------------------------------------------------------------------
 
     def plans(self, frames: Iterable[KnownFrame]) -> list[MasterPlan]:
-        """Masters that the calibration frames make, bias before dark before flat."""
-        return plan_masters((f.id, f.path, f.info) for f in frames if f.info.kind in CALIBRATION)
+        """Masters that the calibration frames make, bias before dark before flat.
+
+        Frames whose files are gone count as long as the master made of them and the others stands.
+        """
+        calibration = [(f.id, f.path, f.info) for f in frames if f.info.kind in CALIBRATION]
+        there = {id_ for id_, path, _ in calibration if path.exists()}
+        planned = plan_masters(calibration)
+        if len(there) == len(calibration):
+            return planned
+        built = {(row.kind, frozenset(row.inputs)) for row in self.book.masters()}
+        for plan in planned:
+            ids = {frame.id for frame in plan.inputs}
+            if (plan.kind, frozenset(ids)) in built:
+                there |= ids
+        return plan_masters(row for row in calibration if row[0] in there)
 
     def build_masters(self, frames: Iterable[KnownFrame], progress: Callable[[str], None]) -> list[Master]:
         """All masters, built where they do not stand yet; `refused` says which could not be made and why."""
@@ -220,3 +246,15 @@ class Intake:
     def _stands(plan: MasterPlan, masters: Iterable[Master]) -> bool:
         ids = {frame.id for frame in plan.inputs}
         return any(master.kind == plan.kind and set(master.inputs) == ids for master in masters)
+
+
+def _info_of_inputs(content: Mapping[str, Any]) -> FrameInfo:
+    """What the inputs of a master have in common, from the master's row."""
+    signature = content["signature"]
+    return FrameInfo(
+        kind=content["kind"], band=content["band"], filter_name=content["filter_name"], object_name="",
+        camera=signature["camera"], mjd_mid=None, exposure_s=content["exposure_s"], ra_deg=None, dec_deg=None,
+        scale_arcsec=None, gain_e_per_adu=signature["gain_e_per_adu"], read_noise_e=None, saturation_adu=None,
+        nx=signature["nx"], ny=signature["ny"], binning=tuple(signature["binning"]),
+        temperature_c=content["temperature_c"],
+    )  # fmt: skip

@@ -68,7 +68,11 @@ def take_snapshot(campaign: Campaign) -> Snapshot:
         ),
         log=tuple(campaign.book.log(limit=500)),
         can_undo=campaign.book.can_undo(),
-        notes=(*campaign.missing_settings(), *((campaign.book.notice,) if campaign.book.notice else ())),
+        notes=(
+            *campaign.missing_settings(),
+            *campaign.unused_files(),
+            *((campaign.book.notice,) if campaign.book.notice else ()),
+        ),
     )
 
 
@@ -119,7 +123,7 @@ class _RowMaker:
     def problem(self, path: Path, sentence: str) -> FrameRow:
         """A file that cannot be used."""
         return FrameRow(
-            id="", file=clean_text(path.name), path=str(path), kind="unknown", band=None, mjd=None, night="",
+            id=str(path), file=clean_text(path.name), path=str(path), kind="unknown", band=None, mjd=None, night="",
             exposure_s=None, outcome="unreadable", state="dropped", reason=sentence, provisional=False,
             by_person=False,
         )  # fmt: skip

@@ -13,6 +13,7 @@ from typing import TYPE_CHECKING, Any
 from reduce.campaign.people import PROGRAM
 from reduce.logbook.lock import reducer_lock
 from reduce.pipeline import Recipe, measure_frame
+from reduce.plain_text import clean_text
 from reduce.records import Measured, Point
 from reduce.runner import TaskResult, run_tasks
 from reduce.views import FrameRow
@@ -167,6 +168,7 @@ class _Batch:
         book = self.campaign.book
         frames = self.intake.known_frames()
         masters = self.intake.build_masters(frames, self.progress)
+        self._say_what_is_refused()
         targets, stars = tuple(self.campaign.targets()), self.campaign.sequence()
         done = book.reductions_done()
         measured_once = {frame for frame, _ in done}
@@ -197,6 +199,14 @@ class _Batch:
         book.add_reduction(measured)
         book.end_attempt(task.frame, task.digest, "done")
         self.measured.add(task.frame)
+
+    def _say_what_is_refused(self) -> None:
+        """One line in the log on each master that cannot be made, once."""
+        said = {row.body for row in self.campaign.log()}
+        for why in self.intake.refused.values():
+            words = clean_text(f"No master could be made: {why}", 2000)
+            if words not in said:
+                self.campaign.book.note("", words, PROGRAM, kind="event")
 
     def _say_what_came(self, new: set[str]) -> None:
         """One line a night in the log on the frames that were measured for the first time."""
@@ -235,7 +245,9 @@ class _Batch:
         durations = {row.frame: row.seconds for row in self.campaign.measured()}
         shown = [row for row in picture if row.outcome != "calibration"]
         rows = [
-            _row(row, durations.get(row.id)) for row in shown if everything or row.id in self.measured or not row.id
+            _row(row, durations.get(row.id))
+            for row in shown
+            if everything or row.id in self.measured or row.kind == "unknown"
         ]
         rows += [
             {
@@ -263,6 +275,7 @@ class _Batch:
             f"{len(shown)} frames: {counts['kept']} kept, {counts['doubtful']} doubtful, {counts['dropped']} dropped "
             f"({unreadable} unreadable); {len(self.measured)} measured now in {seconds:.0f} s."
         )
+        sentence = " ".join([sentence, *self.campaign.unused_files()])
         return Report(tuple(rows), summary, sentence)
 
 

@@ -35,6 +35,7 @@ def steps_of(
     """
     mine = [row for row in rows if target.name in row.targets]
     lost = [row for row in rows if row.outcome == "no match" and not row.by_person]
+    beside = [row for row in rows if row.outcome == "measured" and target.name not in row.targets]
     waiting = [row for row in rows if row.outcome == "waiting"]
     provisional = sum(row.provisional for row in mine)
     kept = sum(row.state == "kept" for row in mine)
@@ -51,7 +52,9 @@ def steps_of(
         else Step("Calibration", "done" if mine else "waiting", "all masters found" if mine else "")
     )
     field = (
-        Step("Field", "wants you", f"{_count(len(lost), 'frame')} not recognised")
+        Step("Field", "wants you", f"not on {_count(len(beside), 'frame')}")
+        if beside and not mine
+        else Step("Field", "wants you", f"{_count(len(lost), 'frame')} not recognised")
         if lost and not mine
         else Step("Field", "done", f"{_count(len(mine), 'frame')} recognised")
         if mine
@@ -68,6 +71,9 @@ def steps_of(
     else:
         distance = Step("Distance", "waiting", "cannot tell yet" if good else "")
     steps = (frames, calibration, field, photometry, curve, distance)
+    if beside and not mine:
+        sentence = f"{target.name} is not on any of {_count(len(beside), 'recognised frame')}: compare its position."
+        return steps, sentence, "Field"
     return steps, *_next(steps, doubtful, lost, unreadable, estimate, good)
 
 

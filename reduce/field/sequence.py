@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import csv
 import math
+from collections import Counter
 from pathlib import Path
 
 import numpy as np
@@ -40,56 +41,81 @@ def read_sequence(path: Path) -> Sequence:
         raise SequenceError(f"{name} cannot be read: {(error.strerror or str(error)).lower()}.") from error
     except UnicodeDecodeError as error:
         raise SequenceError(f"{name} is not a text file; save the comparison stars as CSV.") from error
-    lines = [line for line in text.splitlines() if line.strip() and not line.lstrip().startswith("#")]
-    try:
-        rows = list(csv.DictReader(lines, skipinitialspace=True, restkey="(too many)"))
-    except csv.Error as error:
-        raise SequenceError(f"{name} is not CSV: {clean_text(error)}.") from error
-    columns = {column.strip(): column for column in (rows[0] if rows else {}) if isinstance(column, str)}
-    missing = [wanted for wanted in ("id", "ra", "dec") if wanted not in columns]
-    if missing:
-        raise SequenceError(f"{name} has no column {missing[0]!r}; the first line must name id,ra,dec and bands.")
+    columns, lines = _table(text, name)
     bands = [band for band in BANDS if band in columns]
     if not bands:
         raise SequenceError(f"{name} has no magnitudes; name columns from {', '.join(BANDS)}.")
-    ids = [clean_text(row[columns["id"]] or "", 60) for row in rows]
-    for line, star in enumerate(ids, 2):
-        if not star:
-            raise SequenceError(f"{name}, row {line}: a star has no id.")
-    twice = sorted({star for star in ids if ids.count(star) > 1})
+    if not lines:
+        raise SequenceError(f"{name} has no stars below its first line.")
+    ids = [clean_text(cell, 60) for cell in columns["id"]]
+    if "" in ids:
+        raise SequenceError(f"{name}, line {lines[ids.index('')]}: a star has no id.")
+    twice = sorted(star for star, times in Counter(ids).items() if times > 1)
     if twice:
         raise SequenceError(f"{name} names the star {twice[0]!r} twice; ids must differ.")
-    ra = _column(rows, columns["ra"], name, "ra", 0.0, 360.0, required=True)
-    dec = _column(rows, columns["dec"], name, "dec", -90.0, 90.0, required=True)
+
+    def numbers(column: str, low: float, high: float, required: bool = False) -> Floats:
+        found = [
+            _number(cell, f"{name}, line {line}: {column}", low, high, required)
+            for cell, line in zip(columns[column], lines, strict=True)
+        ]
+        return np.array(found)
+
+    ra, dec = numbers("ra", 0.0, 360.0, required=True), numbers("dec", -90.0, 90.0, required=True)
     _refuse_hours(name, ra, dec)
     mag, mag_err = {}, {}
     for band in bands:
-        mag[band] = _column(rows, columns[band], name, band, -30.0, 40.0)
-        key = columns.get(f"{band}_err")
-        stated = np.full(len(rows), np.nan) if key is None else _column(rows, key, name, f"{band}_err", 0.0, 5.0)
+        mag[band] = numbers(band, -30.0, 40.0)
+        stated = numbers(f"{band}_err", 0.0, 5.0) if f"{band}_err" in columns else np.full(len(lines), np.nan)
         known = np.isfinite(mag[band])
         mag_err[band] = np.where(known, np.where(np.isfinite(stated) & (stated > 0), stated, UNSTATED_ERR_MAG), np.nan)
     return Sequence(clean_text(path.stem, 60), tuple(ids), ra, dec, mag, mag_err)
 
 
-def _column(
-    rows: list[dict[str, str]], key: str, file: str, label: str, low: float, high: float, required: bool = False
-) -> Floats:
-    values = np.full(len(rows), np.nan)
-    for k, row in enumerate(rows):
-        text = (row.get(key) or "").strip()
-        if not text or text.lower() in ("nan", "null", "none", "--", "-"):
-            if required:
-                raise SequenceError(f"{file}, row {k + 2}: {label} is empty.")
-            continue
-        try:
-            values[k] = float(text)
-        except ValueError as error:
-            hint = "; positions must be in decimal degrees" if ":" in text else ""
-            raise SequenceError(f"{file}, row {k + 2}: {label} {clean_text(text, 40)!r} is no number{hint}.") from error
-        if not (math.isfinite(values[k]) and low <= values[k] <= high):
-            raise SequenceError(f"{file}, row {k + 2}: {label} {values[k]:g} is outside {low:g} to {high:g}.")
-    return values
+def _table(text: str, file: str) -> tuple[dict[str, list[str]], list[int]]:
+    """Cells of every column, and the line of the file that each row stands on; comments and blank lines are skipped."""
+    numbered = [
+        (number, line)
+        for number, line in enumerate(text.replace("\r\n", "\n").replace("\r", "\n").split("\n"), 1)
+        if line.strip() and not line.lstrip().startswith("#")
+    ]
+    reader = csv.reader([line for _, line in numbered], skipinitialspace=True)
+    try:
+        names = [cell.strip() for cell in next(reader, [])]
+        rows = [([cell.strip() for cell in cells], numbered[reader.line_num - 1][0]) for cells in reader]
+    except csv.Error as error:
+        raise SequenceError(f"{file} is not CSV: {clean_text(error)}.") from error
+    for wanted in ("id", "ra", "dec"):
+        if wanted not in names:
+            raise SequenceError(
+                f"{file} has no column {wanted!r}; the first line must name id,ra,dec and bands, with commas between."
+            )
+    for name, times in Counter(names).items():
+        if name and times > 1:
+            raise SequenceError(f"{file} names the column {clean_text(name, 40)!r} twice; keep one of them.")
+    for cells, line in rows:
+        if len(cells) > len(names):
+            raise SequenceError(
+                f"{file}, line {line}: more cells than columns; write decimals with a point, and text without commas."
+            )
+        cells.extend([""] * (len(names) - len(cells)))
+    return {name: [cells[k] for cells, _ in rows] for k, name in enumerate(names)}, [line for _, line in rows]
+
+
+def _number(cell: str, place: str, low: float, high: float, required: bool) -> float:
+    """A finite number within limits; NaN for an empty cell that may be empty."""
+    if cell.lower() in ("", "nan", "null", "none", "--", "-"):
+        if required:
+            raise SequenceError(f"{place} is empty.")
+        return float("nan")
+    try:
+        value = float("_" if "_" in cell else cell)  # Python itself would read 1_4 as 14
+    except ValueError as error:
+        hint = "; positions must be in decimal degrees" if ":" in cell else ""
+        raise SequenceError(f"{place} {clean_text(cell, 40)!r} is no number{hint}.") from error
+    if not (math.isfinite(value) and low <= value <= high):
+        raise SequenceError(f"{place} {value:g} is outside {low:g} to {high:g}.")
+    return value
 
 
 def _refuse_hours(file: str, ra: Floats, dec: Floats) -> None:

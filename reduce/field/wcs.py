@@ -26,9 +26,10 @@ def deproject(xi_deg: Floats, eta_deg: Floats, ra0_deg: float, dec0_deg: float) 
     xi, eta = np.radians(xi_deg), np.radians(eta_deg)
     sin0, cos0 = np.sin(np.radians(dec0_deg)), np.cos(np.radians(dec0_deg))
     below = cos0 - eta * sin0
-    ra = ra0_deg + np.degrees(np.arctan2(xi, below))
+    ra = (ra0_deg + np.degrees(np.arctan2(xi, below))) % 360.0
     dec = np.degrees(np.arctan2(sin0 + eta * cos0, np.hypot(xi, below)))
-    return ra % 360.0, dec
+    # The remainder of a tiny negative number rounds to 360 itself.
+    return np.where(ra < 360.0, ra, 0.0), dec
 
 
 def sky_to_pixel(solution: FieldSolution, ra_deg: Floats, dec_deg: Floats) -> tuple[Floats, Floats]:

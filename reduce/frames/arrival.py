@@ -42,15 +42,11 @@ def _scan(folder: Path) -> Iterator[tuple[Path, Stamp]]:
             if is_candidate(name):
                 path = Path(place, name)
                 try:
-                    stat = path.stat()
+                    # A link to nothing is found, so that it is said, not passed over.
+                    stat = path.stat() if path.exists() else path.lstat()
                 except OSError:
                     continue
                 yield path, (stat.st_size, stat.st_mtime_ns)
-
-
-def fits_files(folder: Path) -> list[Path]:
-    """Candidates below a folder, sorted by path."""
-    return list(scan(folder))
 
 
 def completeness(path: Path) -> str | None:

@@ -9,6 +9,7 @@ from __future__ import annotations
 import gzip
 import math
 import os
+import stat
 import zlib
 from collections.abc import Iterator
 from dataclasses import dataclass
@@ -55,6 +56,9 @@ def declared_units(path: Path) -> list[DeclaredUnit]:
         Empty, not FITS, cut short, packed badly, or declaring what no camera makes; in one sentence.
     """
     try:
+        mode = os.stat(path).st_mode
+        if not stat.S_ISREG(mode) and not stat.S_ISDIR(mode):
+            raise FrameError("this is a pipe or a device, not a file; remove it from the folder.")  # reading would wait
         with open(path, "rb") as file:
             size = os.fstat(file.fileno()).st_size
             if size == 0:

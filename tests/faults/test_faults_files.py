@@ -113,6 +113,11 @@ def test_folders_and_missing_files(tmp_path):
     assert "not there" in sentence(tmp_path / "c.fits")
 
 
+def test_a_pipe_does_not_make_anybody_wait(tmp_path):
+    os.mkfifo(tmp_path / "a.fits")
+    assert "pipe" in sentence(tmp_path / "a.fits")
+
+
 def test_a_file_that_may_not_be_read(tmp_path, monkeypatch):
     path = write(tmp_path / "a.fits", counts())
 

@@ -9,7 +9,7 @@ import pytest
 from astropy.io import fits
 from frame_files import bytes_of, counts, header_of, write_gzip
 
-from reduce.frames.arrival import GZIP_REST_S, Poller, completeness, fits_files, is_candidate
+from reduce.frames.arrival import GZIP_REST_S, Poller, completeness, is_candidate, scan
 
 WHOLE = bytes_of(fits.PrimaryHDU(counts(), header_of()))
 
@@ -42,11 +42,11 @@ def test_candidates():
 def test_folders_are_searched_below_and_hidden_ones_not(tmp_path):
     for name in ("b/2.fits", "a/x/1.fit", "3.fits", ".hidden/4.fits", "a/.5.fits", "a/6.fits.part"):
         put(tmp_path / name, WHOLE, 1)
-    assert [str(path.relative_to(tmp_path)) for path in fits_files(tmp_path)] == ["3.fits", "a/x/1.fit", "b/2.fits"]
+    assert [str(path.relative_to(tmp_path)) for path in scan(tmp_path)] == ["3.fits", "a/x/1.fit", "b/2.fits"]
 
 
 def test_a_folder_that_is_gone_is_empty(tmp_path):
-    assert fits_files(tmp_path / "gone") == []
+    assert scan(tmp_path / "gone") == {}
     assert Poller(tmp_path / "gone").poll() == []
 
 

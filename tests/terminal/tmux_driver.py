@@ -6,6 +6,7 @@ import shlex
 import subprocess
 import time
 import uuid
+from collections.abc import Callable
 
 
 class Tmux:
@@ -42,12 +43,16 @@ class Tmux:
     def screen(self, styles: bool = False) -> str:
         return self.run("capture-pane", "-p", *(["-e"] if styles else []))
 
-    def wait(self, text: str, timeout_s: float = 30.0) -> str:
+    def wait(self, text: str, timeout_s: float = 60.0) -> str:
         """The screen as soon as it shows the text."""
+        return self.wait_until(lambda screen: text in screen, timeout_s, repr(text))
+
+    def wait_until(self, seen: Callable[[str], object], timeout_s: float = 60.0, what: str = "it") -> str:
+        """The screen as soon as ``seen`` says so."""
         end = time.monotonic() + timeout_s
-        while text not in (screen := self.screen()):
+        while not seen(screen := self.screen()):
             if time.monotonic() > end:
-                raise AssertionError(f"{text!r} is not on the screen:\n{screen}")
+                raise AssertionError(f"{what} is not on the screen:\n{screen}")
             time.sleep(0.02)
         return screen
 

@@ -147,6 +147,8 @@ class FramesScreen(CampaignScreen):
             self.fadeline.say("There is no frame to decide on.")
         elif row.outcome == "calibration":
             self.fadeline.say("Keep and drop are for frames of the sky, not for calibration frames.")
+        elif row.kind == "unknown":
+            self.fadeline.say("This file cannot be read: there is nothing to keep or drop.")
         else:
             self.fadeline.decide(
                 f"frame:{row.id}", "state", value, f"{'Kept' if value == 'keep' else 'Dropped'} {row.file}"

@@ -35,7 +35,7 @@ class LogScreen(CampaignScreen):
 
     def body(self) -> ComposeResult:
         """Entries, the chosen one in full, the two lines."""
-        yield RowTable("when (UTC)", "what", "target", "who", "words", start_at_end=True, id="log")
+        yield RowTable("when (UTC)", "what", "target", "who", "words", start_at_end=True, follow_end=True, id="log")
         yield Static("", id="entry")
         with Vertical(id="log-inputs"):
             for name, hint in (

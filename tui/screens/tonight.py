@@ -51,7 +51,7 @@ class TonightScreen(CampaignScreen):
         yield Static(Text(SAFETY), id="safety")
         with Container(id="tonight-body"):
             yield RowTable("target", "kind", "nights", "last night", "μ", "wants", id="targets")
-            yield RowTable("latest frame", "UT", "band", "s", "FWHM″", "state", start_at_end=True, id="arrivals")
+            yield RowTable("latest frame", "UT", "band", "s", "FWHM″", "state", id="arrivals")
         yield Static("", id="due")
 
     def show(self, snapshot: Snapshot, view: TargetView | None) -> None:
@@ -59,7 +59,8 @@ class TonightScreen(CampaignScreen):
         self.query_one("#safety").display = self.fadeline.safety_shown
         self.query_one("#targets", RowTable).show([(v.target.name, _target_cells(v)) for v in snapshot.targets])
         lights = [row for row in snapshot.frames if row.outcome != "calibration"]
-        self.query_one("#arrivals", RowTable).show([(row.id, _arrival_cells(row)) for row in lights[-_ARRIVALS:]])
+        latest = sorted(lights, key=lambda row: row.mjd or 0.0, reverse=True)[:_ARRIVALS]
+        self.query_one("#arrivals", RowTable).show([(row.id, _arrival_cells(row)) for row in latest])
         self.query_one("#due", Static).update(due_text(snapshot, self.fadeline.target_name))
 
     @on(DataTable.RowSelected, "#targets")

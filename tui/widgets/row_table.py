@@ -16,12 +16,18 @@ def cell(text: object, style: str = "", right: bool = False) -> Text:
 
 
 class RowTable(DataTable[Text]):
-    """A row-wise table that is told its whole content and changes only what differs."""
+    """A row-wise table that is told its whole content and changes only what differs.
 
-    def __init__(self, *columns: str, start_at_end: bool = False, id: str | None = None) -> None:
+    With ``follow_end`` a cursor on the last row goes on to the new last row; elsewhere nothing moves it.
+    """
+
+    def __init__(
+        self, *columns: str, start_at_end: bool = False, follow_end: bool = False, id: str | None = None
+    ) -> None:
         super().__init__(cursor_type="row", id=id, cell_padding=1)
         self._names = columns
         self._start_at_end = start_at_end
+        self._follow_end = follow_end
         self._shown: dict[str, Cells] = {}
 
     def on_mount(self) -> None:
@@ -34,6 +40,7 @@ class RowTable(DataTable[Text]):
         wanted = dict(rows)
         old = list(self._shown)
         first = not old
+        at_end = self._follow_end and bool(old) and self.chosen() == old[-1]
         if list(wanted)[: len(old)] == old:
             for key in old:
                 for name, before, now in zip(self._names, self._shown[key], wanted[key], strict=True):
@@ -44,7 +51,7 @@ class RowTable(DataTable[Text]):
         else:
             self._rebuild(wanted)
         self._shown = wanted
-        if first and self._start_at_end and wanted:
+        if wanted and (at_end or (first and self._start_at_end)):
             # only after the layout does the table know how far it can scroll
             self.call_after_refresh(self.move_cursor, row=len(wanted) - 1, animate=False)
 
