@@ -155,5 +155,8 @@ def processes_below(session: int) -> list[int]:
 def moved(target: Target, name: str, east_arcsec: float = 0.0, north_arcsec: float = 0.0) -> Target:
     """The same kind of target elsewhere."""
     return replace(
-        target, name=name, ra_deg=target.ra_deg + east_arcsec / 3600 / 0.93, dec_deg=target.dec_deg + north_arcsec / 3600
+        target,
+        name=name,
+        ra_deg=target.ra_deg + east_arcsec / 3600 / 0.93,
+        dec_deg=target.dec_deg + north_arcsec / 3600,
     )

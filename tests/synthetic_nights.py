@@ -43,9 +43,7 @@ class Field:
     sequence: Sequence
 
 
-def invented_field(
-    rng: np.random.Generator, n: int = 30, error: float | None = None, bands: str = "BVRI"
-) -> Field:
+def invented_field(rng: np.random.Generator, n: int = 30, error: float | None = None, bands: str = "BVRI") -> Field:
     """Stars of V 12.5–15.5 and B−V 0.3–1.3; catalogue errors 0.004–0.012 mag unless ``error`` is given."""
     bv = rng.uniform(0.3, 1.3, n)
     v = rng.uniform(12.5, 15.5, n)
@@ -84,9 +82,7 @@ def true_zero_point(shot: Shot) -> float:
     return ZERO_POINTS[shot.band] - FIRST_ORDER[shot.band] * shot.airmass - shot.transparency_mag
 
 
-def measure(
-    shot: Shot, field: Field, rng: np.random.Generator, targets: Iterable[Target] = (TARGET,)
-) -> Measured:
+def measure(shot: Shot, field: Field, rng: np.random.Generator, targets: Iterable[Target] = (TARGET,)) -> Measured:
     """What a perfect measurement of the exposure gives, with photon, sky and read noise."""
     band, sequence, targets = shot.band, field.sequence, list(targets)
     blue, red = COLOUR_OF_BAND[band]
@@ -151,8 +147,6 @@ def nightly_shots(nights: int = 12, repeats: int = 3, bands: str = "BVRI", rise:
             for b, band in enumerate(bands):
                 mjd = FIRST_MJD + night + 0.004 * (k * len(bands) + b)
                 shots.append(
-                    Shot(
-                        f"{band}{night:02d}{k}", band, mjd, mags, airmass=1.1 + 0.08 * k + 0.05 * (night % 4)
-                    )
+                    Shot(f"{band}{night:02d}{k}", band, mjd, mags, airmass=1.1 + 0.08 * k + 0.05 * (night % 4))
                 )
     return shots

@@ -253,7 +253,9 @@ def curve(folder: Path, target: str | None, per_frame: bool, all_stars: bool, as
 @main.command()
 @click.argument("folder", metavar="[DIR]", type=FOLDER, required=False)
 @click.argument("target", required=False)
-@click.option("--light-curve", type=FILE, help="Fit a CSV file instead: name,mjd,band,mag,err,z,ebv_mw[,flux,flux_err].")  # fmt: skip
+@click.option(
+    "--light-curve", type=FILE, help="Fit a CSV file instead: name,mjd,band,mag,err,z,ebv_mw[,flux,flux_err]."
+)
 @click.option("--json", "as_json", is_flag=True, help="One JSON object a target, on a line.")
 @plainly
 def distance(folder: Path | None, target: str | None, light_curve: Path | None, as_json: bool) -> None:

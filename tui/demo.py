@@ -10,13 +10,12 @@ from pathlib import Path
 from typing import Any
 
 import numpy as np
+
 from demo_frames.render import Truth, read_truth, render
 from reduce.campaign.door import Campaign
-
 from reduce.plain_text import PlainError
 from reduce.records import Point, Target
 from reduce.version import version
-
 
 NIGHT_EVERY_S = 6.0
 """In the app, one of the campaign's nights lands in this time."""

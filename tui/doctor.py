@@ -51,12 +51,12 @@ def _terminal() -> list[Finding]:
     big = size.columns >= SMALLEST_TERMINAL[0] and size.lines >= SMALLEST_TERMINAL[1]
     encoding = locale.getpreferredencoding(False)
     unicode = encoding.upper().replace("-", "") == "UTF8"
+    colours = "none (NO_COLOR)" if os.environ.get("NO_COLOR") else os.environ.get("COLORTERM") or "by TERM"
     return [
         Finding(big, f"Terminal of {size.columns}×{size.lines}" + ("." if big else ": enlarge it to 80×24.")),
         Finding(unicode, f"Encoding {encoding}" + ("." if unicode else ": set LANG=C.UTF-8 for finer charts.")),
-        Finding(True, f"TERM={os.environ.get('TERM', '')}, colours: "
-                      f"{'none (NO_COLOR)' if os.environ.get('NO_COLOR') else os.environ.get('COLORTERM') or 'by TERM'}."),
-    ]  # fmt: skip
+        Finding(True, f"TERM={os.environ.get('TERM', '')}, colours: {colours}."),
+    ]
 
 
 def _time_data() -> Finding:

@@ -4,7 +4,7 @@ from dataclasses import replace
 
 import numpy as np
 import pytest
-from random_fields import SIDE_PX, RandomField, random_field, seen
+from random_fields import SIDE_PX, RandomField, random_field
 
 from reduce.field.match import FieldHint, FieldMatch, match_field
 from reduce.field.wcs import sky_to_pixel
