@@ -5,8 +5,6 @@ from __future__ import annotations
 import asyncio
 import os
 import signal
-import subprocess
-import sys
 from concurrent.futures import ProcessPoolExecutor
 from concurrent.futures.process import BrokenProcessPool
 from multiprocessing import get_context
@@ -18,6 +16,7 @@ from reduce.campaign.people import who
 from reduce.logbook.store import FILE_NAME, Logbook
 from reduce.plain_text import PlainError
 from reduce.runner import end_with_parent, prepare_processes
+from tui.reducer_process import ReducerProcess
 from tui.terminal import prepare_environment
 
 if TYPE_CHECKING:
@@ -117,16 +116,6 @@ class LiveDesk:
         self._book.close()
 
 
-def start_reducer(folder: Path) -> subprocess.Popen[bytes]:
-    """``fadeline reduce --follow`` beside the app; it ends at once when another process reduces here.
-
-    Its standard input is a pipe from this process: when it closes, for whatever reason, the reducer stops.
-    """
-    command = [sys.executable, "-m", "tui.cli", "reduce", str(folder), "--follow", "--until-input-ends"]
-    quiet = subprocess.DEVNULL
-    return subprocess.Popen(command, stdin=subprocess.PIPE, stdout=quiet, stderr=quiet, start_new_session=True)
-
-
 def run_app(folder: Path) -> None:
     """Open the app on a campaign and reduce what lands, until the user leaves or the line drops.
 
@@ -142,12 +131,12 @@ def run_app(folder: Path) -> None:
     from tui.app import FadelineApp
 
     desk = LiveDesk(folder)
-    reducer = start_reducer(folder)
+    app = FadelineApp(desk)
+    reducer = ReducerProcess(folder, lambda sentence: app.say(sentence, trouble=True))
     try:
-        app = FadelineApp(desk)
         signal.signal(signal.SIGHUP, lambda *_: app.exit())
+        reducer.keep_running()
         app.run()
     finally:
-        if reducer.stdin is not None:
-            reducer.stdin.close()
+        reducer.stop()
         desk.close()

@@ -59,3 +59,19 @@ def reducer_lock(folder: Path, clock: Callable[[], datetime] = utc_now) -> Itera
         yield
     finally:
         os.close(handle)
+
+
+def is_reducing(folder: Path) -> bool:
+    """Whether some process holds the reducer's lock now; looking does not take it."""
+    try:
+        handle = os.open(folder / LOCK_FILE, os.O_RDONLY | os.O_CLOEXEC)
+    except OSError:
+        return False
+    try:
+        fcntl.flock(handle, fcntl.LOCK_SH | fcntl.LOCK_NB)
+    except OSError:
+        return True
+    else:
+        return False
+    finally:
+        os.close(handle)
