@@ -168,7 +168,7 @@ def reduce(folder: Path, follow: bool, workers: int | None, as_json: bool, until
     unreadable = False
     stop = _stop_wish(until_input_ends)
     for report in campaign.reduce(follow=follow, workers=workers, progress=_progress, should_stop=stop):
-        unreadable = unreadable or report.summary["unreadable"] > 0
+        unreadable = report.summary["unreadable"] > 0
         for row in report.rows:
             if as_json:
                 _print_json(row)

@@ -48,6 +48,8 @@ class Intake:
     """File still being written → how far it is."""
     refused: dict[str, str] = field(default_factory=dict)
     """Master that could not be made → why."""
+    just_refused: set[Path] = field(default_factory=set)
+    """Files that the last look found unusable."""
     _taken: dict[Path, Stamp] = field(default_factory=dict)
     _seen: dict[Path, Stamp] = field(default_factory=dict)
     _infos: dict[tuple[Path, int, int], FrameInfo | None] = field(default_factory=dict)
@@ -55,17 +57,25 @@ class Intake:
 
     # ---- files -------------------------------------------------------------------------------------------
 
-    def look(self, progress: Callable[[str], None], now_s: Callable[[], float] = time.time) -> bool:
+    def look(
+        self,
+        progress: Callable[[str], None],
+        should_stop: Callable[[], bool] = lambda: False,
+        now_s: Callable[[], float] = time.time,
+    ) -> bool:
         """Take what has landed or changed into the logbook; True when something did."""
         known = self.book.known_locations()
         found = {path: stamp for path, stamp in scan(self.folder).items() if not self._is_reference(path)}
         changed = False
+        self.just_refused = set()
         self.waiting = {path: why for path, why in self.waiting.items() if path in found}
         self._taken = {path: stamp for path, stamp in self._taken.items() if path in found}
         for path in self.book.problems().keys() - found.keys():
             self.book.add_problem(path, 0, 0, "")
             changed = True
         for n, (path, stamp) in enumerate(found.items(), 1):
+            if should_stop():
+                break
             if self._taken.get(path) == stamp:
                 continue
             if n % 20 == 0:
@@ -101,6 +111,7 @@ class Intake:
             frame = frame_id(path)
         except FrameError as error:
             self.book.add_problem(path, *stamp, str(error))
+            self.just_refused.add(path)
             return
         self.book.add_frame(frame, opened.header)
         self.book.add_location(frame, path, *stamp)
@@ -164,11 +175,18 @@ class Intake:
                 there |= ids
         return plan_masters(row for row in calibration if row[0] in there)
 
-    def build_masters(self, frames: Iterable[KnownFrame], progress: Callable[[str], None]) -> list[Master]:
+    def build_masters(
+        self,
+        frames: Iterable[KnownFrame],
+        progress: Callable[[str], None],
+        should_stop: Callable[[], bool] = lambda: False,
+    ) -> list[Master]:
         """All masters, built where they do not stand yet; `refused` says which could not be made and why."""
         masters: list[Master] = []
         self.refused = {}
         for plan in self.plans(frames):
+            if should_stop():
+                break
             progress(f"master {clean_text(plan.label)} of {len(plan.inputs)} frames")
             try:
                 master = build_master(plan, masters, self.masters_folder, self.settings)

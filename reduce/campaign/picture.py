@@ -154,7 +154,7 @@ class _RowMaker:
             exposure_s=info.exposure_s,
             outcome=row.outcome if row is not None else "waiting",
             state=verdict.state if verdict is not None else None,
-            reason=" ".join(verdict.reasons) if verdict is not None else "",
+            reason="; ".join(verdict.reasons) if verdict is not None else "",
             provisional=stale,
             by_person=verdict.by_person if verdict is not None else False,
             targets=names,

@@ -24,7 +24,11 @@ if TYPE_CHECKING:
 
 FRAME_TIMEOUT_S = 300.0
 LOOK_EVERY_S = 2.0
-MOST_ATTEMPTS = 2
+MOST_ATTEMPTS = 8
+"""Starts of one frame that nobody ended: its reducer was killed or the machine went down, which need not be its fault.
+A frame whose worker dies is given up earlier, see `reduce.runner.MOST_STARTS`."""
+TOLD = "frames told of in the log"
+"""Setting: how many, in the order they were first measured."""
 MOVED_MAG = 0.001
 """A nightly point that moved by less is not worth a line."""
 
@@ -85,7 +89,7 @@ def reduce_frames(
         first = True
         while True:
             started = time.monotonic()
-            changed = intake.look(progress)
+            changed = intake.look(progress, should_stop)
             if first or changed:
                 batch = _Batch(campaign, intake, workers, progress, should_stop)
                 batch.run()
@@ -140,11 +144,12 @@ class _Batch:
         if tasks:
             self._measure(tasks)
 
-        if self.measured - again:
-            self._say_what_came(self.measured - again)
+        self._say_what_came()
         if self.measured & again:
             self._say_what_moved(len(self.measured & again), before)
         for target in self.campaign.targets():
+            if self.should_stop():
+                return
             self.progress(f"fitting {target.name}")
             self.campaign.estimate_nights(target.name)
             self.campaign.estimate(target.name, f"{len(self.measured)} frames measured" if self.measured else "")
@@ -167,7 +172,9 @@ class _Batch:
         """Frames without a measurement of their present recipe, and those of them that have an older one."""
         book = self.campaign.book
         frames = self.intake.known_frames()
-        masters = self.intake.build_masters(frames, self.progress)
+        masters = self.intake.build_masters(frames, self.progress, self.should_stop)
+        if self.should_stop():
+            return [], set()
         self._say_what_is_refused()
         targets, stars = tuple(self.campaign.targets()), self.campaign.sequence()
         done = book.reductions_done()
@@ -208,8 +215,13 @@ class _Batch:
             if words not in said:
                 self.campaign.book.note("", words, PROGRAM, kind="event")
 
-    def _say_what_came(self, new: set[str]) -> None:
-        """One line a night in the log on the frames that were measured for the first time."""
+    def _say_what_came(self) -> None:
+        """One line a night in the log on frames measured for the first time, by a reducer killed before it told too."""
+        book = self.campaign.book
+        frames = book.frames_measured()
+        new = set(frames[int(book.setting(TOLD) or 0) :])
+        if not new:
+            return
         nights: dict[str, list[FrameRow]] = {}
         for row in self.campaign.frame_rows():
             if row.id in new:
@@ -217,7 +229,8 @@ class _Batch:
         for night, rows in sorted(nights.items()):
             counts = [f"{sum(row.state == state for row in rows)} {state}" for state in ("kept", "doubtful", "dropped")]
             words = f"Night {night}: {len(rows)} frames measured: {', '.join(counts)}."
-            self.campaign.book.note("", words, PROGRAM, night=night, kind="event")
+            book.note("", words, PROGRAM, night=night, kind="event")
+        book.set_setting(TOLD, str(len(frames)))
 
     def _say_what_moved(self, n: int, before: tuple[Point, ...]) -> None:
         """One line in the log when frames were measured again."""
@@ -247,11 +260,11 @@ class _Batch:
         rows = [
             _row(row, durations.get(row.id))
             for row in shown
-            if everything or row.id in self.measured or row.kind == "unknown"
+            if everything or row.id in self.measured or Path(row.path) in self.intake.just_refused
         ]
         rows += [
             {
-                "file": path.name,
+                "file": clean_text(path.name),
                 "band": None,
                 "outcome": "waiting",
                 "state": None,

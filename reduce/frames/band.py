@@ -71,7 +71,8 @@ def band_from_name(name: str, words: Mapping[str, Any]) -> str | None:
     for word in sorted([*words["landolt_words"], *words["sdss_words"], "prime"], key=len, reverse=True):
         rest = re.sub(re.escape(word), " ", rest, flags=re.IGNORECASE)
     parts = [part.replace("'", "") for part in _LETTERS.split(re.sub("[’′`]", "'", rest))]
-    parts = [part for part in parts if part and part.casefold() not in words["idle_words"]]
+    idle = {*words["idle_words"], *words["nothing"]}
+    parts = [part for part in parts if part and part.casefold() not in idle]
     if len(parts) != 1:
         return None
     letter = exact.get(parts[0], parts[0])

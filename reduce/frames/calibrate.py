@@ -37,7 +37,7 @@ def calibrate(adu: Image, info: FrameInfo, chosen: ChosenMasters, settings: Sett
     """
     gain = _stated(info.gain_e_per_adu, settings.camera.gain_e_per_adu, "gain", "gain_e_per_adu")
     read_noise_e = _stated(info.read_noise_e, settings.camera.read_noise_e, "read noise", "read_noise_e")
-    saturation_adu, note = saturation_level(info, settings)
+    saturation_adu, note = saturation_level(info, settings, adu)
     notes = [*chosen.notes, *([note] if note else [])]
 
     mask = np.zeros(adu.shape, np.uint8)

@@ -8,12 +8,19 @@ import numpy as np
 from numpy.typing import ArrayLike
 
 from reduce.frames.combine import CLIP_SIGMA, MAD_TO_SIGMA
-from reduce.records import FrameInfo
+from reduce.records import FrameInfo, Image
 from reduce.settings import Settings
 
 DIGITISATION_ADU = 1.0 / math.sqrt(12.0)
 """Standard deviation of rounding to whole numbers, uniform over one step."""
 LARGEST_16_BIT = 65535.0
+CONVERTER_TOPS_ADU = (4095.0, 16383.0, 32767.0, 65520.0, 65532.0, 65535.0)
+"""Largest numbers of converters of 12, 14, 15 and 16 bits, and of 12 and 14 bits stored as 16."""
+PILED_PIXELS = 3
+"""So many pixels with exactly the highest value of a frame do not happen to real light that is far above the sky."""
+FAR_ABOVE_SKY_ADU = 1000.0
+LARGEST_FULL_SHARE = 0.02
+"""Of an image: stars do not cover more; where more is at the top, it is a flat or twilight."""
 
 
 def gain_from_pairs(
@@ -53,9 +60,27 @@ def pair_statistics(first: ArrayLike, second: ArrayLike) -> tuple[tuple[float, f
     return (float(np.median(a)), float(np.median(b))), float(np.std(difference[inside], ddof=1))
 
 
-def saturation_level(info: FrameInfo, settings: Settings) -> tuple[float, str]:
-    """Raw level, ADU, at which a pixel is full, and a sentence when nobody states it."""
+def converter_top_adu(adu: Image) -> float | None:
+    """Highest value of a frame when it is the converter's top and not the light's: ADU, or None."""
+    top = float(np.nanmax(adu))
+    full = int(np.count_nonzero(adu == np.float32(top)))
+    if top < float(np.nanmedian(adu[::8, ::8])) + FAR_ABOVE_SKY_ADU or full > LARGEST_FULL_SHARE * adu.size:
+        return None
+    return top if full >= PILED_PIXELS or top in CONVERTER_TOPS_ADU else None
+
+
+def saturation_level(info: FrameInfo, settings: Settings, adu: Image | None = None) -> tuple[float, str]:
+    """Raw level, ADU, at which a pixel is full, and a sentence when nobody states it.
+
+    Where nobody does, the pixels of the frame itself may show the converter's top.
+    """
     stated = info.saturation_adu or settings.camera.saturation_adu
     if stated is not None:
         return stated, ""
+    top_adu = converter_top_adu(adu) if adu is not None else None
+    if top_adu is not None and top_adu != LARGEST_16_BIT:
+        return top_adu, (
+            f"no saturation level is stated; {top_adu:.0f} ADU was taken, where the pixels of this frame pile up "
+            "(saturation_adu under [camera])."
+        )
     return LARGEST_16_BIT, "no saturation level is stated; 65535 ADU was assumed (saturation_adu under [camera])."

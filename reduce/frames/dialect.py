@@ -27,6 +27,14 @@ ARCSEC_PER_RADIAN_MM_PER_UM = 206.264806
 """Arcsec subtended by 1 µm at 1 mm."""
 LARGEST_GAIN = 25.0
 """e-/ADU; a larger number under a gain keyword is a setting of the camera (common practice)."""
+SCALE_RANGE_ARCSEC = (0.02, 200.0)
+"""Arcsec a pixel; a scale outside is in another unit or a slip."""
+EXPOSURE_UNITS = (
+    (r"\[ms\]|millisec|\bms\b", 1e-3, "milliseconds"),
+    (r"\[[uµ]s\]|microsec|\b[uµ]s\b", 1e-6, "microseconds"),
+    (r"\[min\]|\bminutes?\b", 60.0, "minutes"),
+)
+"""What the comment of an exposure may say instead of seconds: pattern, seconds, name."""
 
 
 @dataclass(frozen=True, slots=True)
@@ -119,9 +127,10 @@ def _exposure(header: Header, words: Dialect, notes: list[str]) -> float | None:
         if value < 0:
             notes.append(f"{keyword} = {value:g} is negative and was ignored.")
             continue
-        if re.search(r"\[ms\]|millisec|\bms\b", header.comment(keyword), re.IGNORECASE):
-            notes.append(f"{keyword} is in milliseconds by its comment.")
-            return value / 1000.0
+        for pattern, unit_s, name in EXPOSURE_UNITS:
+            if re.search(pattern, header.comment(keyword), re.IGNORECASE):
+                notes.append(f"{keyword} is in {name} by its comment.")
+                return value * unit_s
         return value
     return None
 
@@ -149,6 +158,7 @@ def _kind(header: Header, words: Dialect, path: Path, exposure_s: float | None, 
         notes.append(f"image type {stated!r} is not known; the object's and the file's name were asked.")
     hints = [_letters(header.first_text(words.keywords["object_name"]))]
     hints += [_letters(part) for part in re.split(r"[^A-Za-z]+|(?<=[a-z])(?=[A-Z])", path.name.split(".")[0])]
+    hints.append(_calibration_word(header.first_text(words.keywords["object_name"])))
     for hint in hints:
         if meaning.get(hint) in ("bias", "dark", "flat"):
             notes.append(f"taken as a {meaning[hint]} because it is called {hint!r}; the header does not say.")
@@ -158,6 +168,12 @@ def _kind(header: Header, words: Dialect, path: Path, exposure_s: float | None, 
         return "bias"
     notes.append("taken as a light; the header does not say what kind of frame this is.")
     return "light"
+
+
+def _calibration_word(name: str) -> str:
+    """First word of names like "flat V" or "dark 60 s", '' where a real word follows, as in "Dark River"."""
+    first, *others = re.findall(r"[a-z]+", name.casefold()) or [""]
+    return first if all(len(word) <= 3 for word in others) else ""
 
 
 def _binning(header: Header, words: Dialect) -> tuple[int, int]:
@@ -179,7 +195,13 @@ def _gain(header: Header, words: Dialect, notes: list[str]) -> float | None:
         comment = header.comment(keyword).casefold().replace(" ", "")
         if value <= 0:
             continue
-        if re.search(r"adu[^a-z]*(/|per)e", comment):
+        if re.search(r"setting|\bdb\b|[^a-z]db\b", comment):
+            notes.append(
+                f"{keyword} = {value:g} is a setting of the camera by its comment; it was ignored "
+                "(write gain_e_per_adu under [camera] in observatory.toml)."
+            )
+            continue
+        if re.search(r"(adu|dn)[^a-z]*(/|per)e", comment):
             notes.append(f"{keyword} is in ADU per electron by its comment and was inverted.")
             return 1.0 / value
         if value > LARGEST_GAIN:
@@ -219,22 +241,27 @@ def _temperature(header: Header, words: Dialect, notes: list[str]) -> float | No
 
 
 def _scale(header: Header, words: Dialect, binning: tuple[int, int], notes: list[str]) -> float | None:
-    on_sky = "RA" in header.text("CTYPE1").upper() or "DEC" in header.text("CTYPE1").upper()
-    cd = [header.number(keyword) for keyword in ("CD1_1", "CD1_2", "CD2_1", "CD2_2")]
-    if on_sky and cd[0] is not None and cd[3] is not None:
-        area = abs(cd[0] * cd[3] - (cd[1] or 0.0) * (cd[2] or 0.0))
-        if area > 0:
-            return math.sqrt(area) * 3600.0
-    step = header.number("CDELT1"), header.number("CDELT2")
-    if on_sky and step[0] and step[1]:
-        return math.sqrt(abs(step[0] * step[1])) * 3600.0
-    stated = _positive(header, words.keywords["scale_arcsec"])
-    if stated is not None and stated < 200:
-        return stated
+    """The first that makes sense of: the sky coordinates, a stated scale, pixel size and focal length."""
     pixel_um = _positive(header, words.keywords["pixel_um"])
     focal_mm = _positive(header, words.keywords["focal_length_mm"])
-    if pixel_um is None or focal_mm is None:
+    optics = ARCSEC_PER_RADIAN_MM_PER_UM * pixel_um / focal_mm if pixel_um and focal_mm else None
+    for scale_arcsec in (_coordinate_scale(header), _positive(header, words.keywords["scale_arcsec"]), optics):
+        if scale_arcsec is not None and SCALE_RANGE_ARCSEC[0] <= scale_arcsec <= SCALE_RANGE_ARCSEC[1]:
+            if scale_arcsec is optics and max(binning) > 1:
+                notes.append(
+                    "the scale follows from pixel size and focal length, the size taken as that of a binned pixel."
+                )
+            return scale_arcsec
+    return None
+
+
+def _coordinate_scale(header: Header) -> float | None:
+    """Arcsec a pixel by the header's sky coordinates."""
+    if not re.search("RA|DEC", header.text("CTYPE1").upper()):
         return None
-    if max(binning) > 1:
-        notes.append("the scale follows from pixel size and focal length, the size taken as that of a binned pixel.")
-    return ARCSEC_PER_RADIAN_MM_PER_UM * pixel_um / focal_mm
+    cd = [header.number(keyword) or 0.0 for keyword in ("CD1_1", "CD1_2", "CD2_1", "CD2_2")]
+    area = abs(cd[0] * cd[3] - cd[1] * cd[2])
+    if area > 0:
+        return math.sqrt(area) * 3600.0
+    step = header.number("CDELT1"), header.number("CDELT2")
+    return math.sqrt(abs(step[0] * step[1])) * 3600.0 if step[0] and step[1] else None

@@ -16,7 +16,7 @@ from typing import Any
 import numpy as np
 
 from reduce.frames.combine import combine, typical_sigma
-from reduce.frames.detector import saturation_level
+from reduce.frames.detector import CONVERTER_TOPS_ADU, LARGEST_FULL_SHARE, saturation_level
 from reduce.frames.extent import declared_units
 from reduce.frames.master_sets import (
     ChosenMasters,
@@ -140,24 +140,37 @@ def _flats(
     for frame in frames:
         image = frame.read()
         step = max(1, math.isqrt(image.size // LEVEL_SAMPLE))
-        saturation_adu, _ = saturation_level(frame.info, settings)
-        fraction = float(np.nanmedian(image[::step, ::step])) / saturation_adu
+        fraction, lowest = _flat_level(image[::step, ::step], frame, settings)
         levels.append(fraction)
         pedestal = pedestal_adu(lower, frame.info.exposure_s)
         level = float(np.nanmedian((image - pedestal)[::step, ::step]))
-        if FLAT_RANGE[0] <= fraction <= FLAT_RANGE[1] and level > 0:
+        if lowest <= fraction <= FLAT_RANGE[1] and level > 0:
             kept.append(frame)
             prepare.append(_divide(lower, frame.info.exposure_s, level))
     if not kept:
         raise FrameError(
             f"{plan.label}: all {len(frames)} flats are at {100 * min(levels):.0f}–{100 * max(levels):.0f} % of "
-            "saturation, outside 10–80 %; take them again with another exposure."
+            "saturation, outside 10–80 %; take them again with another exposure, or state the saturation_adu of the "
+            "camera under [camera] in observatory.toml."
         )
     if len(kept) < len(frames):
         notes.append(
             f"{len(frames) - len(kept)} of {len(frames)} flats are not at 10 to 80 % of saturation and left out."
         )
     return kept, prepare
+
+
+def _flat_level(sample: Image, frame: Frame, settings: Settings) -> tuple[float, float]:
+    """Level of a flat as a fraction of saturation, and the lowest that is usable.
+
+    Where nobody states the saturation, the converter may be one of few bits: what would be enough for the smallest is.
+    """
+    saturation_adu, not_stated = saturation_level(frame.info, settings)
+    if not not_stated:
+        return float(np.nanmedian(sample)) / saturation_adu, FLAT_RANGE[0]
+    if np.mean(sample == np.nanmax(sample)) > LARGEST_FULL_SHARE:
+        return 1.0, FLAT_RANGE[0]
+    return float(np.nanmedian(sample)) / saturation_adu, FLAT_RANGE[0] * min(CONVERTER_TOPS_ADU) / saturation_adu
 
 
 def _divide(lower: ChosenMasters, exposure_s: float | None, level: float) -> Prepare:

@@ -23,10 +23,13 @@ LARGEST_MJD = 2000000.0
 """A larger number is a Julian date."""
 MOST_DISAGREEMENT_S = 600.0
 """Between two time keywords of a header, beyond the exposure: more means that one is not UTC."""
+FIRST_CAMERA_YEAR = 70
+"""Of the 1900s: the old form of a date with a smaller year was meant for the 2000s, but FITS does not say so."""
 _MJD_ZERO = date(1858, 11, 17).toordinal()
 _DATE = re.compile(r"^(\d{4})[-/](\d{1,2})[-/](\d{1,2})$")
 _OLD_DATE = re.compile(r"^(\d{1,2})/(\d{1,2})/(\d{2})$")
 _CLOCK = re.compile(r"^(\d{1,2}):(\d{1,2})(?::(\d{1,2}(?:\.\d*)?))?$")
+_MIDNIGHT = re.compile(r"^0?0:00(:00(\.0*)?)?Z?$")
 _ZONE = re.compile(r"[+-]\d{1,2}:?\d{0,2}$|[A-Za-z]")
 _LOCAL = re.compile(r"\blocal\b|\bLT\b|\bLST\b|civil", re.IGNORECASE)
 _UTC = re.compile(r"\bU\.?T\.?C?\b|\bGMT\b|universal", re.IGNORECASE)
@@ -132,12 +135,19 @@ def _calendar(header: Header, keyword: str, words: Mapping[str, list[str]], note
     if day is None:
         notes.append(f"{keyword} = {text!r} is not a date in the FITS form and was ignored.")
         return None
-    if not clock_text:
-        clock_text, clock_keyword = _clock_elsewhere(header, words, notes)
-        if not clock_text:
+    if not clock_text or _MIDNIGHT.match(clock_text):
+        # Some cameras fill the place of an unknown time of day with zeros.
+        elsewhere, clock_keyword = _clock_elsewhere(header, words, notes)
+        if elsewhere and not _MIDNIGHT.match(elsewhere):
+            notes.append(
+                f"the time of day was taken from {clock_keyword}, as {keyword} has none."
+                if not clock_text
+                else f"the time of day was taken from {clock_keyword}, as {keyword} says midnight."
+            )
+        if not clock_text and not elsewhere:
             notes.append(f"{keyword} = {text} has no time of day.")
             return None
-        notes.append(f"the time of day was taken from {clock_keyword}, as {keyword} has none.")
+        clock_text = elsewhere or clock_text
     if clock_text[-1:] in "Zz":
         notes.append(f"{keyword} ends in Z, which FITS does not allow; it was read as UTC.")
         clock_text = clock_text[:-1]
@@ -168,6 +178,9 @@ def _day(text: str, keyword: str, notes: list[str]) -> float | None:
         if match is not None:
             day = date(int(match[1]), int(match[2]), int(match[3]))
         elif old is not None:
+            if int(old[3]) < FIRST_CAMERA_YEAR:
+                notes.append(f"{keyword} = {text} would be a year of the 1900s before electronic cameras.")
+                return None
             day = date(1900 + int(old[3]), int(old[2]), int(old[1]))
         else:
             return None

@@ -65,7 +65,7 @@ def _right_ascension(
         return None
     if unit == "degrees" or value >= 24 or value < 0 or re.search(r"\bdeg|°", comment):
         return value % 360.0
-    if re.search(r"\bhours?\b|\bhrs?\b|\[h", comment):
+    if re.search(r"\bhours?\b|\bhrs?\b|[\[(]h", comment):
         return value * 15.0
     for ra_deg, other_dec_deg in _other_positions(header, keyword, pairs):
         for candidate in (value, value * 15.0):

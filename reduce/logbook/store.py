@@ -215,6 +215,10 @@ class Logbook(Log, Arrivals):
         """(frame, recipe) of every stored reduction."""
         return {(frame, recipe) for frame, recipe in self._database.rows("SELECT frame, recipe FROM reduction")}
 
+    def frames_measured(self) -> list[str]:
+        """Every frame with a reduction, in the order of the first one."""
+        return [frame for (frame,) in self._database.rows("SELECT frame FROM reduction GROUP BY frame ORDER BY min(rowid)")]
+
     def newest_reductions(self, wanted: Mapping[str, str] | None = None) -> list[Measured]:
         """One reduction a frame, by mid-exposure: that of the wanted recipe if there is one, else the newest.
 

@@ -13,6 +13,11 @@ from reduce.stars.width import FWHM_PER_SIGMA
 
 ROUNDS = 12
 LARGEST_MOVE_FWHM = 1.0
+WINDOW_PER_IMAGE = 1.5
+"""Variance of the window over the image's. For faint stars 1 is best, for bright ones infinity; 1.5 costs 4 % and 19 %
+of the error."""
+LEAST_WINDOW_PX2 = 1.5
+"""A narrower window would be undersampled."""
 
 
 def centroid_error(fwhm_px: float, snr: float) -> float:
@@ -41,8 +46,11 @@ def centroid(
     n = len(x_px)
     if n == 0 or not math.isfinite(fwhm_px):
         return np.array(x_px, float), np.array(y_px, float), np.full(n, np.nan), np.zeros(n, bool)
-    sigma = max(fwhm_px, 1.5) / FWHM_PER_SIGMA
-    half = math.ceil(4 * sigma) + 1
+    # Variance of the image on a pixel grid, of the window, and of the product of two Gaussians.
+    image = (fwhm_px / FWHM_PER_SIGMA) ** 2 + 1 / 12
+    window = max(WINDOW_PER_IMAGE * image, LEAST_WINDOW_PX2)
+    product = image * window / (image + window)
+    half = math.ceil(4 * math.sqrt(image)) + 1
     cuts = cut_out(data_e, x_px, y_px, half, np.nan).astype(float)
     sky = np.nanmedian(_edge(cuts), axis=1)
     scatter = 1.4826 * np.nanmedian(np.abs(_edge(cuts) - sky[:, None]), axis=1)
@@ -52,17 +60,18 @@ def centroid(
     total = np.ones(n)
     for _ in range(ROUNDS):
         dx, dy = dx0 - x[:, None, None], dy0 - y[:, None, None]
-        light = cuts * np.exp(-(dx**2 + dy**2) / (2 * sigma**2))
+        light = cuts * np.exp(-(dx**2 + dy**2) / (2 * window))
         total = light.sum(axis=(1, 2))
         safe = np.where(total > 0, total, np.inf)
-        # The window halves the measured offset of a Gaussian image of its own width: twice the step converges.
-        x = x + 2.0 * (light * dx).sum(axis=(1, 2)) / safe
-        y = y + 2.0 * (light * dy).sum(axis=(1, 2)) / safe
+        # The window holds the measured offset back to product / image of the true one.
+        x = x + image / product * (light * dx).sum(axis=(1, 2)) / safe
+        y = y + image / product * (light * dy).sum(axis=(1, 2)) / safe
     good = (total > 0) & np.isfinite(sky) & (np.hypot(x, y) < LARGEST_MOVE_FWHM * max(fwhm_px, 1.5))
-    # A window of the image's own width keeps half of a Gaussian's light; its noise is that of 4 π σ² pixels.
-    flux = 2.0 * np.where(good, total, np.nan)
-    noise = np.sqrt(np.maximum(flux, 0) + 4 * np.pi * sigma**2 * scatter**2)
-    error = np.where(good, sigma * noise / np.maximum(flux, 1e-9), np.nan)
+    # Photons and sky propagated through the estimator; integrals of products of Gaussians.
+    flux = np.where(good, total, np.nan) * image / product
+    twice = 1.0 / (1.0 / image + 2.0 / window)
+    noise = np.maximum(flux, 0) * twice**2 / image + scatter**2 * math.pi * window**2 / 2
+    error = np.sqrt(noise) * image**2 / (np.maximum(flux, 1e-9) * product**2)
     return np.where(good, x_px + x, x_px), np.where(good, y_px + y, y_px), error, good
 
 

@@ -57,6 +57,27 @@ def made(tmp_path_factory: pytest.TempPathFactory) -> list[Master]:
     return masters
 
 
+@pytest.mark.parametrize("top_adu", [4095, 16383, 20000])
+def test_a_converter_of_few_bits_shows_its_top_where_nobody_states_it(tmp_path: Path, top_adu: int) -> None:
+    adu = np.minimum(camera(300, 60.0, 7), 3000)
+    adu[90:93, 100:102] = top_adu
+    info = open_frame(write(tmp_path / "light.fits", adu), Settings()).info
+    settings = Settings(camera=Camera(gain_e_per_adu=GAIN, read_noise_e=READ_NOISE_E))
+    image = calibrate(adu.astype(np.float32), info, ChosenMasters(), settings)
+    assert np.argwhere(image.mask & PixelFlag.SATURATED).tolist() == [[y, x] for y in (90, 91, 92) for x in (100, 101)]
+    assert any(f"{top_adu} ADU was taken" in note for note in image.notes)
+
+
+def test_a_bright_star_below_the_top_is_not_called_saturated(tmp_path: Path) -> None:
+    adu = np.minimum(camera(300, 60.0, 7), 3000)
+    adu[90, 100:103] = 20000, 20001, 20001
+    info = open_frame(write(tmp_path / "light.fits", adu), Settings()).info
+    settings = Settings(camera=Camera(gain_e_per_adu=GAIN, read_noise_e=READ_NOISE_E))
+    image = calibrate(adu.astype(np.float32), info, ChosenMasters(), settings)
+    assert not (image.mask & PixelFlag.SATURATED).any()
+    assert any("65535 ADU was assumed" in note for note in image.notes)
+
+
 def light(exposure_s: float = 120.0, **changes: object) -> FrameInfo:
     return replace(
         FrameInfo(
