@@ -18,7 +18,7 @@ from reduce.almanac.sky import sun_altitude
 from reduce.almanac.times import bjd_tdb
 from reduce.curve.comparison import star_points
 from reduce.curve.nights import make_points
-from reduce.field.match import FieldHint, match_field
+from reduce.field.match import FieldHint, FieldMatch, match_field
 from reduce.field.wcs import pixel_to_sky, sky_to_pixel
 from reduce.frames.calibrate import calibrate
 from reduce.frames.master_sets import ChosenMasters
@@ -42,7 +42,7 @@ from reduce.records import (
     Target,
 )
 from reduce.settings import Settings
-from reduce.standard.solve import solve_standard
+from reduce.standard.solve import StandardSolution, solve_standard
 from reduce.stars.centroid import centroid
 from reduce.stars.detect import detect
 from reduce.stars.width import frame_fwhm
@@ -78,7 +78,7 @@ class Recipe:
             "version": MEASURE_VERSION,
             "settings": self.settings.model_dump(exclude={"photometry"}, mode="json"),
             "masters": self.masters.digests(),
-            "targets": [[target.name, target.ra_deg, target.dec_deg] for target in self.targets],
+            "targets": [[target.name, target.ra_deg, target.dec_deg, target.on_host] for target in self.targets],
             "astrometric": stars.hexdigest(),
         }
 
@@ -136,9 +136,7 @@ def _require(info: FrameInfo) -> None:
 
 def _measure_image(blank: Measured, adu: Image, image: CalibratedImage, info: FrameInfo, recipe: Recipe) -> Measured:
     detections = detect(image.data_e, image.mask, saturation_e=image.saturation_e)
-    hint = FieldHint(ra_deg=info.ra_deg, dec_deg=info.dec_deg, scale_arcsec=_scale(info, recipe.settings))
-    stars = recipe.astrometric
-    match = match_field(detections, stars.ra_deg, stars.dec_deg, _ranking_mag(stars), hint, image.data_e.shape)
+    match = _find_field(detections, info, recipe, image.data_e.shape)
     fwhm_px = frame_fwhm(detections)
     if match.solution is None:
         quality = _quality(image, detections, fwhm_px, info, None, None, recipe.settings)
@@ -159,6 +157,17 @@ def _measure_image(blank: Measured, adu: Image, image: CalibratedImage, info: Fr
         quality=_quality(image, detections, fwhm_px, info, centre, table, recipe.settings),
         stamps=pack(image, table, fwhm_px, match.solution),
     )
+
+
+def _find_field(detections: Detections, info: FrameInfo, recipe: Recipe, shape: tuple[int, int]) -> FieldMatch:
+    """The field at the scale that is stated; where that does not fit, at any: it may be that of an unbinned pixel."""
+    stars = recipe.astrometric
+    mag = _ranking_mag(stars)
+    hint = FieldHint(ra_deg=info.ra_deg, dec_deg=info.dec_deg, scale_arcsec=_scale(info, recipe.settings))
+    match = match_field(detections, stars.ra_deg, stars.dec_deg, mag, hint, shape)
+    if match.solution is not None or hint.scale_arcsec is None:
+        return match
+    return match_field(detections, stars.ra_deg, stars.dec_deg, mag, replace(hint, scale_arcsec=None), shape)
 
 
 def _scale(info: FrameInfo, settings: Settings) -> float | None:
@@ -189,6 +198,7 @@ def _measure_stars(
     for tx, ty in zip(target_x[inside], target_y[inside], strict=True):
         away &= np.hypot(x - tx, y - ty) > fwhm_px
     x, y, found = x[away][:MOST_STARS], y[away][:MOST_STARS], found[away][:MOST_STARS]
+    hosts = np.array([target.on_host for target in recipe.targets], bool)
     all_x = np.concatenate([x, target_x[inside]])
     all_y = np.concatenate([y, target_y[inside]])
     neighbours = np.column_stack([
@@ -199,6 +209,7 @@ def _measure_stars(
         image, all_x, all_y, fwhm_px, solution.scale_arcsec, neighbours,
         centred=np.concatenate([found, np.zeros(int(inside.sum()), bool)]), raw_adu=adu,
         linear_limit_adu=recipe.settings.camera.linear_limit_adu,
+        on_host=np.concatenate([np.zeros(len(x), bool), hosts[inside]]),
     )  # fmt: skip
     table["ra_deg"], table["dec_deg"] = pixel_to_sky(solution, all_x, all_y)
     for row, k in enumerate(np.flatnonzero(inside), start=len(x)):
@@ -272,9 +283,16 @@ def solve(
     with_stars
         Also give the comparison stars' points.
     """
-    wanted = tuple(targets)
     standard = solve_standard(measured, sequence, choices, settings)
-    frame_points, night_points = make_points(standard, wanted, choices, settings.site)
+    solution = solve_points(standard, targets, choices, settings)
+    return replace(solution, star_points=star_points(standard, sequence)) if with_stars else solution
+
+
+def solve_points(
+    standard: StandardSolution, targets: Iterable[Target], choices: Choices, settings: Settings
+) -> Solution:
+    """The second half of `solve`: all that an excluded point changes, the standard system being solved."""
+    frame_points, night_points = make_points(standard, tuple(targets), choices, settings.site)
     return Solution(
         verdicts=standard.verdicts,
         zero_points=standard.zero_points,
@@ -282,6 +300,5 @@ def solve(
         stars=standard.stars,
         frame_points=frame_points,
         night_points=night_points,
-        star_points=star_points(standard, sequence) if with_stars else (),
         notes=standard.notes,
     )

@@ -283,6 +283,11 @@ class Target:
     host_dec_deg: float | None = None
     reference_folder: str | None = None
 
+    @property
+    def on_host(self) -> bool:
+        """Whether it lies on a galaxy, as the observer says by stating the galaxy's centre."""
+        return self.host_ra_deg is not None and self.host_dec_deg is not None
+
 
 @dataclass(frozen=True, slots=True)
 class Choices:
@@ -380,6 +385,7 @@ class Point:
     state: PointState
     flags: tuple[str, ...] = ()
     host_method: str = "annulus"
+    """The sky about it, or "bent annulus" where the target lies on a galaxy."""
     zp_group: str = ""
     """camera/band/night."""
     provisional: bool = False

@@ -9,21 +9,23 @@ from dataclasses import replace
 from functools import cached_property
 from importlib.resources import files
 from pathlib import Path
-from typing import TYPE_CHECKING, Self
+from typing import TYPE_CHECKING, Any, Self
 
 from reduce.campaign.decide import decision_of
 from reduce.campaign.estimates import estimate_target, inputs_digest
 from reduce.campaign.intake import Intake, KnownFrame
 from reduce.campaign.people import PROGRAM, who
 from reduce.campaign.targets import TargetError
+from reduce.curve.comparison import star_points
 from reduce.exchange.export import ExportFormat, write_points
 from reduce.field.sequence import SequenceError, read_sequence
 from reduce.logbook.store import FILE_NAME, Logbook
-from reduce.pipeline import solve
+from reduce.pipeline import solve_points
 from reduce.plain_text import PlainError, clean_text
-from reduce.records import BANDS, Estimate, Measured, Point, Solution, Target
+from reduce.records import BANDS, Choices, Estimate, Measured, Point, Solution, Target
 from reduce.records import Sequence as ComparisonSequence
 from reduce.settings import Settings, parse_settings, read_settings
+from reduce.standard.solve import StandardSolution, solve_standard
 from reduce.version import version
 from reduce.views import FrameRow, LogRow, Snapshot
 
@@ -48,6 +50,7 @@ class Campaign:
     def __init__(self, folder: Path, book: Logbook, settings: Settings) -> None:
         self.folder, self.book, self.settings = folder, book, settings
         self._solved: tuple[int, Solution, list[Measured]] | None = None
+        self._standard_known: tuple[Any, StandardSolution] | None = None
 
     # ---- make and open -----------------------------------------------------------------------------------
 
@@ -117,7 +120,11 @@ class Campaign:
                 f"{folder.resolve()} holds no campaign; make one with: fadeline new {folder} --frames … (see --help)."
             )
         settings = read_settings(folder / SETTINGS_FILE)
-        return cls(folder, Logbook.open(folder), settings)
+        book = Logbook.open(folder)
+        if not book.targets():
+            book.close()
+            raise CampaignError(f"{folder.resolve()} was never finished; remove it and make the campaign again.")
+        return cls(folder, book, settings)
 
     # ---- what is known -----------------------------------------------------------------------------------
 
@@ -220,19 +227,29 @@ class Campaign:
         if self._solved is None or self._solved[0] != stamp:
             science = {frame.id for frame in self.known_frames() if frame.info.kind == "light"}
             rows = [m for m in self.book.newest_reductions(self.wanted_recipes()) if m.frame in science]
-            solution = solve(rows, self.sequence(), self.targets(), self.book.choices(), self.settings)
+            choices = self.book.choices()
+            standard = self._standard(rows, choices)
+            solution = solve_points(standard, self.targets(), choices, self.settings)
             self._solved = stamp, solution, rows
         return self._solved
+
+    def _standard(self, rows: list[Measured], choices: Choices) -> StandardSolution:
+        """The standard system; kept, as most changes of the logbook leave it as it is."""
+        key = (
+            tuple((row.frame, row.recipe) for row in rows),
+            self.book.sequence_id(),
+            replace(choices, excluded_points=frozenset()),
+        )
+        if self._standard_known is None or self._standard_known[0] != key:
+            self._standard_known = key, solve_standard(rows, self.sequence(), choices, self.settings)
+        return self._standard_known[1]
 
     def curve(self, target: str, *, per_frame: bool = False, all_stars: bool = False) -> list[Point]:
         """Points of a target, by night or by frame, and on demand those of the comparison stars (by frame)."""
         solution = self.solution()
         points = [p for p in (solution.frame_points if per_frame else solution.night_points) if p.star == target]
         if all_stars:
-            choices = self.book.choices()
-            points += solve(
-                self.measured(), self.sequence(), self.targets(), choices, self.settings, with_stars=True
-            ).star_points
+            points += star_points(self._standard(self.measured(), self.book.choices()), self.sequence())
         names = {frame.id: clean_text(frame.path.name) for frame in self.known_frames()}
         stale = self._stale_frames()
         groups = {p.zp_group for p in solution.frame_points if p.file in stale and p.star == target}

@@ -81,6 +81,7 @@ class _PointMaker:
 
     def __init__(self, visit: Visit, target: Target, choices: Choices, passband: Mapping[str, float]) -> None:
         self.visit = visit
+        self.host_method = "bent annulus" if target.on_host else "annulus"
         system, term = visit.system, visit.system.term
         self.known = bool(np.isfinite(visit.colour))
         self.colour = visit.colour if self.known else float(np.nan_to_num(term.colour_mean))
@@ -139,6 +140,7 @@ class _PointMaker:
             flux_err=flux_err,
             state=state,
             flags=flags,
+            host_method=self.host_method,
             zp_group=f"{self.visit.system.camera}/{self.visit.band}/{self.visit.night}",
             n_frames=n_frames,
             natural_mag=magnitude(natural_flux) if seen and natural_flux > 0 else None,

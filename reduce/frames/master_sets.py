@@ -198,7 +198,8 @@ def choose_masters(info: FrameInfo, masters: Iterable[Master]) -> ChosenMasters:
     """The masters that suit a light (or a flat, which gets no flat).
 
     A dark of the same exposure is taken as it is. One of another exposure is scaled, which needs a bias; the shortest
-    of the longer ones is preferred, as scaling up multiplies its noise. Ties go to the nearer temperature, then to more
+    of the longer ones is preferred, as scaling up multiplies its noise. Without a bias a flat takes the shortest dark
+    as it is. Ties go to the nearer temperature, then to more
     inputs, then to the digest: the order of ``masters`` does not matter.
     """
     own = Signature.of(info)
@@ -244,6 +245,11 @@ def _choose_dark(info: FrameInfo, darks: Sequence[Master], bias: Master | None, 
     if not usable or info.exposure_s is None:
         notes.append("no dark frames of this camera, size, binning and temperature.")
         return None
+    if bias is None and info.kind == "flat":
+        # It carries the bias level; its dark signal is small beside a flat's light.
+        chosen = min(usable, key=_length)
+        notes.append(f"the dark of {chosen.exposure_s:g} s stands in for the bias.")
+        return chosen
     if bias is None:
         notes.append(f"no dark of {info.exposure_s:g} s, and without bias frames another cannot be scaled.")
         return None

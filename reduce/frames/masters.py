@@ -62,7 +62,7 @@ def build_master(plan: MasterPlan, masters: Iterable[Master], folder: Path, sett
     """
     lower = _lower(plan, masters)
     if plan.kind == "flat" and lower.bias is None and lower.dark is None:
-        raise FrameError(f"{plan.label} needs bias frames, or darks of its own exposure: take some.")
+        raise FrameError(f"{plan.label} needs bias frames, or darks: take some.")
     digest, path = _named(plan, lower, folder)
     found = _stored(plan, digest, path)
     if found is not None:

@@ -217,7 +217,9 @@ class Logbook(Log, Arrivals):
 
     def frames_measured(self) -> list[str]:
         """Every frame with a reduction, in the order of the first one."""
-        return [frame for (frame,) in self._database.rows("SELECT frame FROM reduction GROUP BY frame ORDER BY min(rowid)")]
+        return [
+            frame for (frame,) in self._database.rows("SELECT frame FROM reduction GROUP BY frame ORDER BY min(rowid)")
+        ]
 
     def newest_reductions(self, wanted: Mapping[str, str] | None = None) -> list[Measured]:
         """One reduction a frame, by mid-exposure: that of the wanted recipe if there is one, else the newest.
@@ -269,6 +271,11 @@ class Logbook(Log, Arrivals):
             write.execute("INSERT INTO sequence VALUES (?, ?, ?, ?)", (key, sequence.name, to_json(bands), self._now()))
             write.executemany("INSERT INTO sequence_star VALUES (?, ?, ?, ?, ?, ?)", [(key, *star) for star in stars])
             return True
+
+    def sequence_id(self) -> str:
+        """Id of the comparison sequence in force, '' without one."""
+        row = self._database.row("SELECT id FROM sequence ORDER BY rowid DESC LIMIT 1")
+        return str(row[0]) if row else ""
 
     def current_sequence(self) -> ComparisonSequence | None:
         """The comparison sequence added last."""

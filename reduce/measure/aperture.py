@@ -10,7 +10,7 @@ from numpy.typing import NDArray
 
 from reduce.measure.crowding import neighbour_light
 from reduce.measure.noise import aperture_variance
-from reduce.measure.sky import annulus_sky
+from reduce.measure.sky import SkyLevels, annulus_sky
 from reduce.records import (
     LADDER_ARCSEC,
     LADDER_FWHM,
@@ -84,6 +84,7 @@ def measure_stars(
     centred: NDArray[np.bool_] | None = None,
     raw_adu: Image | None = None,
     linear_limit_adu: float | None = None,
+    on_host: NDArray[np.bool_] | None = None,
 ) -> NDArray[Any]:
     """Fluxes of many stars at their given positions.
 
@@ -104,6 +105,8 @@ def measure_stars(
         (ny, nx) frame as read, for ``peak_adu``; without it the peak is that of the calibrated frame over the gain.
     linear_limit_adu
         Peak above which NON_LINEAR is set.
+    on_host
+        (n,) True where the sky is that of a galaxy. None: nowhere.
 
     Returns
     -------
@@ -123,8 +126,10 @@ def measure_stars(
 
     usable = (image.mask == 0) & np.isfinite(image.data_e)
     sky = annulus_sky(image.data_e, usable, neighbours_xy, x_px, y_px, fwhm_px)
-    table["sky_e_px"], table["sky_sigma_e_px"] = sky.level_e_px, sky.sigma_e_px
-    table["sky_err_e_px"], table["sky_n_px"] = sky.err_e_px, sky.n_px
+    _write_sky(table, np.ones(n, bool), sky)
+    if on_host is not None and on_host.any():
+        place = x_px[on_host], y_px[on_host]
+        _write_sky(table, on_host, annulus_sky(image.data_e, usable, neighbours_xy, *place, fwhm_px, on_host=True))
 
     radii = ladder_radii_px(fwhm_px, scale_arcsec)
     half = math.ceil(radii.max() + 0.5) + 1
@@ -139,6 +144,11 @@ def measure_stars(
     if linear_limit_adu is not None:
         table["flags"][table["peak_adu"] > linear_limit_adu] |= np.uint32(StarFlag.NON_LINEAR)
     return table
+
+
+def _write_sky(table: NDArray[Any], where: NDArray[np.bool_], sky: SkyLevels) -> None:
+    table["sky_e_px"][where], table["sky_sigma_e_px"][where] = sky.level_e_px, sky.sigma_e_px
+    table["sky_err_e_px"][where], table["sky_n_px"][where] = sky.err_e_px, sky.n_px
 
 
 def _measure_block(

@@ -27,6 +27,8 @@ NEIGHBOUR_FWHM = 3.0
 CLIP_SIGMA = 3.5
 """At 3 σ clipping a skewed Poisson sky costs 0.04 electrons a pixel, at 3.5 σ 0.01."""
 ROUNDS = 5
+HOST_INNER_FWHM, HOST_OUTER_FWHM = 3.0, 5.0
+"""On a galaxy, where the sky is bent: nearer, and a surface of second degree instead of a plane."""
 
 
 @dataclass(frozen=True, slots=True)
@@ -62,6 +64,8 @@ def annulus_sky(
     x_px: Floats,
     y_px: Floats,
     fwhm_px: float,
+    *,
+    on_host: bool = False,
 ) -> SkyLevels:
     """Sky level, scatter and error at many stars.
 
@@ -73,8 +77,10 @@ def annulus_sky(
         (m, 2) positions of all stars of the image.
     x_px, y_px
         (n,) positions to measure.
+    on_host
+        They lie on a galaxy, whose light bends under the annulus: noisier, but nearer to the light at the star.
     """
-    rows, columns = _annulus(fwhm_px)
+    rows, columns = _annulus(fwhm_px, *((HOST_INNER_FWHM, HOST_OUTER_FWHM) if on_host else (INNER_FWHM, OUTER_FWHM)))
     ny, nx = data_e.shape
     y = np.rint(y_px).astype(int)[:, None] + rows
     x = np.rint(x_px).astype(int)[:, None] + columns
@@ -84,7 +90,15 @@ def annulus_sky(
     clear = inside & without_neighbours(usable, neighbours_xy, fwhm_px).ravel()[pixel]
     good = np.where(clear.sum(axis=1, keepdims=True) >= ENOUGH_PX, clear, good)
     values = np.where(good, data_e.ravel()[pixel], 0.0).astype(float)
-    return _planes(values, good, rows, columns, x_px - np.rint(x_px), y_px - np.rint(y_px))
+    degree = 2 if on_host else 1
+    at_star = _terms(x_px - np.rint(x_px), y_px - np.rint(y_px), degree).T
+    return _surfaces(values, good, _terms(columns.astype(float), rows.astype(float), degree), at_star)
+
+
+def _terms(x: Floats, y: Floats, degree: int) -> Floats:
+    """(k, n) terms of a surface: 1, x, y and for the second degree x², xy, y²."""
+    terms = [np.ones_like(x), x, y]
+    return np.stack(terms if degree == 1 else [*terms, x**2, x * y, y**2])
 
 
 def _ring(inner_px: float, outer_px: float) -> tuple[NDArray[np.int64], NDArray[np.int64]]:
@@ -95,34 +109,26 @@ def _ring(inner_px: float, outer_px: float) -> tuple[NDArray[np.int64], NDArray[
     return grid[rows], grid[columns]
 
 
-def _annulus(fwhm_px: float) -> tuple[NDArray[np.int64], NDArray[np.int64]]:
-    inner, outer = INNER_FWHM * fwhm_px, OUTER_FWHM * fwhm_px
+def _annulus(fwhm_px: float, inner_fwhm: float, outer_fwhm: float) -> tuple[NDArray[np.int64], NDArray[np.int64]]:
+    inner, outer = inner_fwhm * fwhm_px, outer_fwhm * fwhm_px
     return _ring(inner, max(outer, (LEAST_PX / np.pi + inner**2) ** 0.5 + 1.0))
 
 
-def _planes(
-    values: Floats,
-    good: NDArray[np.bool_],
-    rows: NDArray[np.int64],
-    columns: NDArray[np.int64],
-    shift_x: Floats,
-    shift_y: Floats,
-) -> SkyLevels:
+def _surfaces(values: Floats, good: NDArray[np.bool_], basis: Floats, at_star: Floats) -> SkyLevels:
+    """Fit (n, m) values with the (k, m) terms of ``basis``, clipped, and evaluate at the stars, (n, k) terms."""
     # The first centre and width come from the lower half alone, which stars in the annulus do not reach.
     middle, low = _quantiles(values, good, (0.5, 0.1587))
     sigma = np.maximum(middle - low, 1e-12)
     keep = good & (np.abs(values - middle[:, None]) < CLIP_SIGMA * sigma[:, None])
-    basis = np.stack([np.ones(len(rows)), columns, rows]).astype(float)
     level = err = np.full(len(values), np.nan)
     n = keep.sum(axis=1)
     for _ in range(ROUNDS):
-        plane, inverse = _fit(values - middle[:, None], keep, basis)
-        residual = values - middle[:, None] - np.einsum("nk,km->nm", plane, basis)
+        surface, inverse = _fit(values - middle[:, None], keep, basis)
+        residual = values - middle[:, None] - np.einsum("nk,km->nm", surface, basis)
         n = keep.sum(axis=1)
         with np.errstate(invalid="ignore", divide="ignore"):
-            sigma = np.sqrt(np.einsum("nm,nm,nm->n", keep.astype(float), residual, residual) / (n - 3.0))
-        at_star = np.stack([np.ones_like(shift_x), shift_x, shift_y], axis=1)
-        level = middle + np.einsum("nk,nk->n", plane, at_star)
+            sigma = np.sqrt(np.einsum("nm,nm,nm->n", keep.astype(float), residual, residual) / (n - float(len(basis))))
+        level = middle + np.einsum("nk,nk->n", surface, at_star)
         err = sigma * np.sqrt(np.maximum(np.einsum("nj,njk,nk->n", at_star, inverse, at_star), 0.0))
         clipped = good & (np.abs(residual) <= CLIP_SIGMA * sigma[:, None])
         if np.array_equal(clipped, keep):
@@ -142,15 +148,16 @@ def _quantiles(values: Floats, good: NDArray[np.bool_], which: tuple[float, ...]
 
 
 def _fit(values: Floats, keep: NDArray[np.bool_], basis: Floats) -> tuple[Floats, Floats]:
-    """Planes (n, 3) through the kept values, and the inverses (n, 3, 3) of their normal matrices."""
+    """Surfaces (n, k) through the kept values, and the inverses (n, k, k) of their normal matrices."""
+    k = len(basis)
     weight = keep.astype(float)
     # einsum, not a matrix product: the sum's order must not depend on the linear algebra library's threads.
-    products = (basis[:, None, :] * basis[None, :, :]).reshape(9, -1)
-    normal = np.einsum("nm,km->nk", weight, products).reshape(-1, 3, 3)
+    products = (basis[:, None, :] * basis[None, :, :]).reshape(k * k, -1)
+    normal = np.einsum("nm,km->nk", weight, products).reshape(-1, k, k)
     right = np.einsum("nm,km->nk", weight * values, basis)
     # A tilt that too few pixels cannot tell is held at zero instead of failing.
     poor = keep.sum(axis=1) < FEWEST_PX
-    normal[poor] = np.eye(3)
+    normal[poor] = np.eye(k)
     right[poor] = 0.0
     inverse = np.linalg.inv(normal)
     return np.einsum("njk,nk->nj", inverse, right), inverse

@@ -52,26 +52,30 @@ def centroid(
     product = image * window / (image + window)
     half = math.ceil(4 * math.sqrt(image)) + 1
     cuts = cut_out(data_e, x_px, y_px, half, np.nan).astype(float)
-    sky = np.nanmedian(_edge(cuts), axis=1)
-    scatter = 1.4826 * np.nanmedian(np.abs(_edge(cuts) - sky[:, None]), axis=1)
+    edge = _edge(cuts)
+    known = np.isfinite(edge).any(axis=1)
+    edge[~known] = 0.0
+    sky = np.nanmedian(edge, axis=1)
+    scatter = 1.4826 * np.nanmedian(np.abs(edge - sky[:, None]), axis=1)
     cuts = np.nan_to_num(cuts - sky[:, None, None])
     dx0, dy0 = offsets_of(x_px, y_px, half)
     x, y = np.zeros(n), np.zeros(n)
-    total = np.ones(n)
     for _ in range(ROUNDS):
         dx, dy = dx0 - x[:, None, None], dy0 - y[:, None, None]
-        light = cuts * np.exp(-(dx**2 + dy**2) / (2 * window))
+        weight = np.exp(-(dx**2 + dy**2) / (2 * window))
+        light = cuts * weight
         total = light.sum(axis=(1, 2))
         safe = np.where(total > 0, total, np.inf)
         # The window holds the measured offset back to product / image of the true one.
         x = x + image / product * (light * dx).sum(axis=(1, 2)) / safe
         y = y + image / product * (light * dy).sum(axis=(1, 2)) / safe
-    good = (total > 0) & np.isfinite(sky) & (np.hypot(x, y) < LARGEST_MOVE_FWHM * max(fwhm_px, 1.5))
-    # Photons and sky propagated through the estimator; integrals of products of Gaussians.
-    flux = np.where(good, total, np.nan) * image / product
-    twice = 1.0 / (1.0 / image + 2.0 / window)
-    noise = np.maximum(flux, 0) * twice**2 / image + scatter**2 * math.pi * window**2 / 2
-    error = np.sqrt(noise) * image**2 / (np.maximum(flux, 1e-9) * product**2)
+    # The centroid solves sum(light · d) = 0: its error is the noise of that sum over the slope of that sum.
+    square = (dx**2 + dy**2) / 2
+    slope = total - (light * square).sum(axis=(1, 2)) / window
+    noise2 = ((cuts + scatter[:, None, None] ** 2) * weight**2 * square).sum(axis=(1, 2))
+    good = known & (total > 0) & (slope > 0) & (noise2 > 0)
+    good &= np.hypot(x, y) < LARGEST_MOVE_FWHM * max(fwhm_px, 1.5)
+    error = np.where(good, np.sqrt(np.where(good, noise2, 1.0)) / np.where(good, slope, 1.0), np.nan)
     return np.where(good, x_px + x, x_px), np.where(good, y_px + y, y_px), error, good
 
 

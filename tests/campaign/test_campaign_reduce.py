@@ -363,6 +363,24 @@ def test_a_refused_campaign_leaves_nothing(demo, tmp_path):
     assert not (tmp_path / "c").exists()
 
 
+def test_a_campaign_whose_making_was_interrupted_is_said(tmp_path):
+    Logbook.create(tmp_path / "c").close()
+    (sentence,) = fadeline("reduce", tmp_path / "c", code=2).stderr.strip().splitlines()
+    assert "never finished" in sentence
+
+
+def test_a_frames_folder_with_an_odd_name(demo, tmp_path):
+    frames = tmp_path / os.fsdecode(b"n\xe4chte \x1b[2J")
+    lay(demo, frames, [V_LIGHT])
+    sequence, target = demo.place / "comparison.csv", "Odd,167.48125,21.63717,type_ia"
+    folder = tmp_path / "c"
+    said = fadeline("new", folder, "--frames", frames, "--sequence", sequence, "--target", target, "--scale", 1.021)
+    assert "\x1b" not in said.stderr
+    assert "\x1b" not in fadeline("log", folder).stdout
+    rows, _ = reduce_json(folder)
+    assert rows[NAME]["outcome"] == "measured"
+
+
 def test_a_campaign_is_not_made_over_another(demo, tmp_path):
     folder = make_campaign(demo, tmp_path, [])
     with pytest.raises(CampaignError, match="holds a campaign already"):

@@ -4,7 +4,7 @@ from dataclasses import replace
 
 import numpy as np
 import pytest
-from random_fields import SIDE_PX, RandomField, random_field
+from random_fields import SIDE_PX, RandomField, random_field, seen
 
 from reduce.field.match import FieldHint, FieldMatch, match_field
 from reduce.field.wcs import pixel_to_sky, sky_to_pixel

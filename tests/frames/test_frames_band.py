@@ -20,6 +20,7 @@ NAMES = [
     ("V filter", "V"), ("2: V", "V"), ("#3 Rc", "R"), ("V-band (Bessell)", "V"),
     ("g'", "g"), ("r'", "r"), ("i'", "i"), ("gp", "g"), ("rp", "r"), ("ip", "i"), ("r prime", "r"), ("SDSS g", "g"),
     ("SDSS r'", "r"), ("SDSS-R", "r"), ("sdssi", "i"), ("sloan_g", "g"), ("Sloan R", "r"), ("g_SDSS", "g"),
+    ("V+Clear", "V"), ("B,Clear", "B"), ("air, R", "R"), ("BESS-V", "V"),
     ("SDSS g' (2)", "g"), ("r'2", "r"), ("SG", "g"), ("PS1 i", "i"),
     # ambiguous or not of a standard system
     ("Red", None), ("Green", None), ("Blue", None), ("G", None), ("L", None), ("Lum", None), ("Clear", None),
@@ -48,6 +49,7 @@ def test_the_observers_own_names_come_first():
     ("cards", "name", "band", "note"),
     [
         ({"FILTER1": "air", "FILTER2": "Bessell V"}, "Bessell V", "V", ""),
+        ({"FILT1": "air", "FILT2": "V"}, "V", "V", ""),
         ({"FILTER1": "clear", "FILTER2": "open"}, "", None, "names no filter"),
         ({"FILTER": "Clear", "FILTER1": "B"}, "B", "B", ""),
         ({"FILTER1": "B", "FILTER2": "V"}, "B + V", None, "two filters"),

@@ -22,6 +22,7 @@ from reduce.frames.master_sets import ChosenMasters, Master, choose_masters, pla
 from reduce.frames.masters import build_master
 from reduce.frames.reader import frame_id, open_frame
 from reduce.records import FrameError, FrameInfo
+from reduce.settings import Settings
 
 NY, NX = 60, 80
 BIAS_ADU, DARK_ADU_PER_S, NOISE_ADU = 1000.0, 0.5, 5.0
@@ -203,6 +204,39 @@ def test_flats_of_a_useless_level_are_left_out_or_refused(tmp_path):
     make_flats(tmp_path, levels=(60000, 61000, 1000, 58000, 2000))
     with pytest.raises(FrameError, match=r"all 5 flats are at 3–9\d % of saturation, outside 10–80 %; take them again"):
         build_all(tmp_path, tmp_path / "m")
+
+
+def test_where_no_saturation_is_stated_flats_of_a_converter_of_few_bits_are_taken(tmp_path):
+    make_bias(tmp_path)
+    make_flats(tmp_path, levels=(1500, 2500, 3000, 2800, 2700))
+    bare = Settings(camera=SETTINGS.camera.model_copy(update={"saturation_adu": None}))
+    made: list[Master] = []
+    for plan in plan_masters(rows(tmp_path)):
+        made.append(build_master(plan, made, tmp_path / "m", bare))
+    assert made[1].n_inputs == 5
+
+
+def test_flats_at_the_top_of_an_unknown_converter_are_refused(tmp_path):
+    make_bias(tmp_path)
+    for k in range(5):
+        write(tmp_path / f"flat{k}.fits", np.full((NY, NX), 16383, np.uint16), IMAGETYP="flat", EXPTIME=2.0)
+    bare = Settings(camera=SETTINGS.camera.model_copy(update={"saturation_adu": None}))
+    bias, flat = plan_masters(rows(tmp_path))
+    made = [build_master(bias, [], tmp_path / "m", bare)]
+    with pytest.raises(FrameError, match=r"at 100–100 % of saturation.*state the saturation_adu"):
+        build_master(flat, made, tmp_path / "m", bare)
+
+
+def test_without_bias_frames_a_flat_takes_the_shortest_dark(tmp_path):
+    make_darks(tmp_path, 120.0)
+    make_darks(tmp_path, 30.0)
+    make_flats(tmp_path)
+    flat = build_all(tmp_path, tmp_path / "m")[-1]
+    found = building.read_master(flat.path)
+    truth = response() / np.median(response())
+    # 30 s of dark are 15 ADU under 20000 to 30000.
+    assert np.abs(found / truth - 1.0).mean() < 0.005
+    assert found.std() / truth.std() == pytest.approx(1.0, abs=0.01)
 
 
 def test_a_flat_needs_a_pedestal(tmp_path):

@@ -79,6 +79,32 @@ def test_no_star_near_a_large_galaxy_is_measured_with_its_slope() -> None:
     assert sky.level_e_px - 200.0 == pytest.approx(here, rel=0.2)
 
 
+@pytest.mark.parametrize("place", [(16.0, -9.0), (10.0, 10.0), (20.0, 5.0), (-7.0, 14.0)])
+def test_on_a_host_the_light_at_the_star_is_found_where_a_plane_misses_it(place: tuple[float, float]) -> None:
+    """An inclined exponential disc under photon noise: a bent surface is nearer than 30 %, a plane misses 60 %."""
+
+    def disc(x: np.ndarray | float, y: np.ndarray | float) -> np.ndarray:
+        return 3000.0 * np.exp(-np.hypot((x - 150.0) / 11.0, (y - 150.0) / 8.0))
+
+    rows, columns = np.mgrid[0:300, 0:300].astype(float)
+    data = np.random.default_rng(8).poisson(300.0 + disc(columns, rows)).astype(np.float32)
+    x, y = np.array([150.0 + place[0]]), np.array([150.0 + place[1]])
+    centre = np.array([[150.0, 150.0]])
+    found = annulus_sky(data, np.ones(data.shape, bool), centre, x, y, FWHM, on_host=True)
+    assert found.level_e_px - 300.0 == pytest.approx(disc(x, y), rel=0.3)
+
+
+def test_error_on_a_host_is_the_scatter_of_the_level() -> None:
+    rng = np.random.default_rng(9)
+    x, y = grid(500, 50, rng)
+    pulls = []
+    for _ in range(10):
+        data = rng.normal(200.0, 15.0, (500, 500)).astype(np.float32)
+        sky = annulus_sky(data, np.ones(data.shape, bool), NOBODY, x, y, FWHM, on_host=True)
+        pulls.append((sky.level_e_px - 200.0) / sky.err_e_px)
+    assert np.sqrt(np.mean(np.square(pulls))) == pytest.approx(1.0, abs=0.06)
+
+
 def test_masked_pixels_do_not_count() -> None:
     data = np.random.default_rng(4).normal(100.0, 5.0, (100, 100))
     usable = np.ones(data.shape, bool)

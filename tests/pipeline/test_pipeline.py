@@ -116,6 +116,15 @@ def test_a_target_is_measured_at_its_stated_position_not_at_a_star_nearby(demo, 
     assert star["flux_e"][0] < 0.9 * right["flux_e"][0]  # a small aperture beside the star loses light
 
 
+@pytest.mark.parametrize("factor", [0.5, 2.0])
+def test_a_scale_that_is_wrong_by_the_binning_does_not_lose_the_field(demo, recipe, factor):
+    right = measure(demo, recipe)
+    camera = recipe.settings.camera.model_copy(update={"scale_arcsec": factor * right.solution.scale_arcsec})
+    row = measure(demo, replace(recipe, settings=recipe.settings.model_copy(update={"camera": camera})))
+    assert row.outcome == "measured"
+    assert row.solution.scale_arcsec == pytest.approx(right.solution.scale_arcsec, rel=1e-4)
+
+
 def test_a_target_off_the_frame_or_at_its_edge_has_no_row(demo, recipe):
     target = recipe.targets[0]
     row = measure(demo, replace(recipe, targets=(target, moved(target, "Far", north_arcsec=3600))))

@@ -25,7 +25,7 @@ from reduce.records import BudgetLine
 @pytest.mark.parametrize(
     ("band", "per_sfd"),
     [
-        # Schlafly & Finkbeiner 2011 (ApJ 737, 103), Table 6, R_V = 3.1: A_b per unscaled SFD E(B-V)
+        # SF-01, SF-02: Schlafly & Finkbeiner 2011 (ApJ 737, 103), Table 6, R_V = 3.1: A_b per unscaled SFD E(B-V)
         ("B", 3.626), ("V", 2.742), ("R", 2.169), ("I", 1.505),  # Landolt
         ("g", 3.303), ("r", 2.285), ("i", 1.698),  # SDSS
     ],
@@ -36,13 +36,13 @@ def test_extinction_per_unscaled_reddening(band, per_sfd):
 
 @pytest.mark.parametrize(("band", "expected"), [("B", 0.3532), ("V", 0.2671), ("R", 0.2113), ("I", 0.1466)])
 def test_extinction_of_a_real_line_of_sight(band, expected):
-    # arithmetic with Table 6 of Schlafly & Finkbeiner 2011: E_SFD = 0.0974 = 0.0838 / 0.86
+    # SF-04: arithmetic with Table 6 of Schlafly & Finkbeiner 2011: E_SFD = 0.0974 = 0.0838 / 0.86
     assert milky_way_extinction(band, 0.0974, "SFD") == pytest.approx(expected, abs=1e-4)
     assert milky_way_extinction(band, 0.0838, "SF11") == pytest.approx(expected, abs=2e-4)
 
 
 def test_recalibrated_scale():
-    # abstract of Schlafly & Finkbeiner 2011: a 14 % recalibration of the 1998 map
+    # SF-05: abstract of Schlafly & Finkbeiner 2011: a 14 % recalibration of the 1998 map
     assert to_sf11(0.100, "SFD") == pytest.approx(0.0860, abs=1e-4)
     assert to_sf11(0.086, "SF11") == 0.086
 
@@ -57,13 +57,13 @@ def test_the_models_coefficients_belong_to_the_recalibrated_scale(band):
 
 
 def test_decline_rate_is_counted_in_rest_frame_days():
-    # definition: m = 12 + 0.0049 t_rest², at z = 0.02 15 rest days are 15.30 observed days and Δm15 = 1.1025
+    # DM15-01: definition: m = 12 + 0.0049 t_rest², at z = 0.02 15 rest days are 15.30 observed days and Δm15 = 1.1025
     assert rest_phase(55000.0 + 15.30, 55000.0, 0.02) == pytest.approx(15.0, abs=1e-9)
     assert 0.0049 * rest_phase(55015.30, 55000.0, 0.02) ** 2 == pytest.approx(1.1025, abs=1e-4)
 
 
 def test_time_dilation():
-    # definition: 15 rest days at z = 0.05 last 15.75 d
+    # TD-01: definition: 15 rest days at z = 0.05 last 15.75 d
     assert rest_phase(15.75, 0.0, 0.05) == pytest.approx(15.0, abs=1e-6)
 
 
@@ -87,11 +87,11 @@ def test_k_corrections_near_maximum_are_small_and_grow_after_it():
 
 
 def test_modulus_and_distance():
-    # definition: μ = 29.178 is 6.84857 Mpc
+    # DM-01: definition: μ = 29.178 is 6.84857 Mpc
     assert modulus_to_mpc(29.178) == pytest.approx(6.84857, abs=1e-4)
-    # Pietrzynski et al. 2019 (Nature 567, 200): the Large Magellanic Cloud at 49.59 kpc
+    # DM-02: Pietrzynski et al. 2019 (Nature 567, 200): the Large Magellanic Cloud at 49.59 kpc
     assert mpc_to_modulus(0.04959) == pytest.approx(18.47697, abs=1e-4)
-    # arithmetic, ln(10)/5
+    # DM-03: arithmetic, ln(10)/5
     assert fractional_distance_error(0.15) == pytest.approx(0.06908, abs=1e-5)
 
 
@@ -115,7 +115,7 @@ def test_a_normal_supernova_peaks_where_common_practice_says():
 @pytest.mark.parametrize(
     ("h0", "z", "mu", "distance"),
     [
-        # astropy.cosmology FlatLambdaCDM, Ω_m = 0.3, no radiation
+        # COS-70-0.01 to COS-73.04-0.1: astropy.cosmology FlatLambdaCDM, Ω_m = 0.3, no radiation
         (70.0, 0.01, 33.17532, 43.1582), (70.0, 0.05, 36.73459, 222.2891), (70.0, 0.1, 38.31520, 460.2999),
         (73.04, 0.01, 33.08300, 41.3619), (73.04, 0.05, 36.64228, 213.0372), (73.04, 0.1, 38.22289, 441.1418),
     ],
@@ -128,24 +128,24 @@ def test_flat_cosmology_and_low_redshift_expansion_agree(h0, z, mu, distance):
 
 @pytest.mark.parametrize(("z", "mu"), [(0.01, 33.17538), (0.05, 36.73602)])
 def test_hubble_law_to_second_order(z, mu):
-    # d_L = cz/H0 [1 + (1 - q0) z/2], H0 = 70, q0 = -0.55
+    # HUB-0.01, HUB-0.05: d_L = cz/H0 [1 + (1 - q0) z/2], H0 = 70, q0 = -0.55
     assert hubble_modulus(z, 70.0, -0.55) == pytest.approx(mu, abs=1e-5)
 
 
 def test_peculiar_velocity():
-    # 5/ln(10) · 250 km/s / cz at z = 0.01
+    # PEC-01: 5/ln(10) · 250 km/s / cz at z = 0.01
     assert peculiar_velocity_modulus_error(0.01, 250.0) == pytest.approx(0.1811, abs=1e-4)
 
 
 def test_scales_of_h0():
-    # arithmetic: 5 log10(72/65)
+    # H0S-01: arithmetic: 5 log10(72/65)
     assert h0_magnitude_shift(65.0, 72.0) == pytest.approx(0.22210, abs=1e-5)
     # arithmetic: 5 log10(73.04/72)
     assert h0_magnitude_shift(72.0, 73.04) == pytest.approx(0.0311, abs=1e-4)
 
 
 def test_error_budget_adds_in_quadrature():
-    # arithmetic: σ_B 0.02; Δm15 ± 0.05 with slope 0.634; E ± 0.03 with R_B 4.1; intrinsic 0.15
+    # BUD-01: arithmetic: σ_B 0.02; Δm15 ± 0.05 with slope 0.634; E ± 0.03 with R_B 4.1; intrinsic 0.15
     lines = [
         BudgetLine("peak", 0.02),
         BudgetLine("decline rate", 0.05 * 0.634),

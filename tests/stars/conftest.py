@@ -1,0 +1,1 @@
+"""Its presence lets test files import modules that lie in this folder (drawn_fields)."""
