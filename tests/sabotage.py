@@ -93,7 +93,7 @@ FLIPS = (
     _flip("zero point of target fluxes", "curve/visits.py", "frame.zp_mag - FLUX_ZERO_POINT)) / stars", "FLUX_ZERO_POINT - frame.zp_mag)) / stars", NIGHTS),
     _flip("flux zero point", "records.py", "FLUX_ZERO_POINT = 25.0", "FLUX_ZERO_POINT = 23.9", STANDARD, "exchange/test_exchange_light_curve_file", TYPE_IA),
     _flip("mean of a night weighted by the errors", "curve/combine.py", "inverse = flux_err**-2.0", "inverse = flux_err**2.0", STANDARD),
-    _flip("err_night and err_band exchanged", "curve/light_curve.py", "err_night=column((point.err_night for", "err_night=column((point.err_band for", NIGHTS),
+    _flip("err_night and err_band exchanged", "curve/light_curve.py", "err_night=column((point.err_night for", "err_night=column((point.err_band for", "curve/test_curve_light_curve"),
     _flip("err_night and err_band exchanged in points", "curve/nights.py", "err_night=self._err_night(zero_point_err),\n            err_band=self.err_band,", "err_night=self.err_band,\n            err_band=self._err_night(zero_point_err),", NIGHTS),
     _flip("combined zero points do not average down", "curve/nights.py", "np.sqrt(np.sum((mean.weight * zero_point_errs) ** 2))", "np.sqrt(np.sum(mean.weight * zero_point_errs**2))", NIGHTS),
     # ---- distance

@@ -91,7 +91,7 @@ class opened:
 def fadeline(*words: object, code: int = 0) -> subprocess.CompletedProcess[str]:
     """Run the command to its end; it must leave with this code and without a traceback."""
     done = subprocess.run([*COMMAND, *map(str, words)], capture_output=True, text=True, check=False, cwd="/")
-    assert "Traceback" not in done.stderr
+    assert "Traceback" not in done.stderr, done.stderr
     assert done.returncode == code, done.stdout + done.stderr
     return done
 

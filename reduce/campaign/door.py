@@ -88,6 +88,10 @@ class Campaign:
             raise CampaignError(f"{folder} holds a campaign already; open it, or choose another folder.")
         if not frames.is_dir():
             raise CampaignError(f"The frames folder {frames} does not exist; make it, or correct the path.")
+        if not str(frames.resolve()).isprintable():
+            raise CampaignError(
+                f"The frames folder {clean_text(frames, 300)} has a name with unprintable characters; rename it."
+            )
         names = [target.name for target in targets]
         if not targets or len(set(names)) != len(names):
             raise CampaignError("Give at least one target, each with a name of its own.")

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import math
+from dataclasses import replace
 from typing import Any
 
 import numpy as np
@@ -10,7 +11,7 @@ from numpy.typing import NDArray
 
 from reduce.measure.crowding import neighbour_light
 from reduce.measure.noise import aperture_variance
-from reduce.measure.sky import SkyLevels, annulus_sky
+from reduce.measure.sky import HOST_MISS, SkyLevels, annulus_sky
 from reduce.records import (
     LADDER_ARCSEC,
     LADDER_FWHM,
@@ -129,7 +130,9 @@ def measure_stars(
     _write_sky(table, np.ones(n, bool), sky)
     if on_host is not None and on_host.any():
         place = x_px[on_host], y_px[on_host]
-        _write_sky(table, on_host, annulus_sky(image.data_e, usable, neighbours_xy, *place, fwhm_px, on_host=True))
+        near = annulus_sky(image.data_e, usable, neighbours_xy, *place, fwhm_px, on_host=True)
+        host_e_px = np.maximum(near.level_e_px - np.nanmedian(sky.level_e_px), 0.0)
+        _write_sky(table, on_host, replace(near, err_e_px=np.hypot(near.err_e_px, HOST_MISS * host_e_px)))
 
     radii = ladder_radii_px(fwhm_px, scale_arcsec)
     half = math.ceil(radii.max() + 0.5) + 1

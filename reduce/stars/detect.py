@@ -15,6 +15,8 @@ from reduce.stars.width import BRIGHTEST, FWHM_PER_SIGMA, frame_fwhm
 THRESHOLD_SIGMA = 5.0
 FIRST_FWHM_PX = 3.5
 """Of the first pass, which only measures the frame's own width."""
+SURROUNDINGS = 3.0
+"""Width of the kernel's negative part over that of the positive part, which is the star's."""
 MESH_PX = 64
 SMALLEST_WIDTH = 0.6
 """A detection narrower than this times the frame's FWHM is a hot pixel or a cosmic ray."""
@@ -22,9 +24,9 @@ LARGEST_FWHM_PX = 40.0
 MOMENT_ROUNDS = 10
 WEIGHT_EXTRA_PX2 = 0.5
 WINGS_TO_WIDTH = 3.2
-"""How much narrower than its moments say the half-maximum of a winged image is, per excess of light in a window twice as
-wide: within 1 % for Moffat profiles of beta 2 to infinity, by their integrals. Pixels and the weight's extra width
-dilute the excess by about 1 + WINGS_DILUTION_PX2 / variance."""
+"""How much narrower than its moments say the half-maximum of a winged image is, per excess of light in a window twice
+as wide: within 1.2 % for Moffat profiles of beta 2 to infinity, by their integrals. Pixels and the weight's extra
+width dilute the excess by about 1 + WINGS_DILUTION_PX2 / variance."""
 WINGS_DILUTION_PX2 = 0.7
 """Measured on simulated Gaussian, Moffat and Kolmogorov stars of 1.5 to 8 px."""
 NARROWEST_OF_MOMENTS = 0.8
@@ -124,8 +126,11 @@ def _find(clean: Image, noise: Image, fwhm_px: float, most: int) -> tuple[Floats
     width = fwhm_px / FWHM_PER_SIGMA
     # Beyond the edge there is nothing: repeated edge pixels would repeat their noise and pass for stars.
     smooth = gaussian_filter(clean, width, mode="constant", truncate=3.0)
-    # A Gaussian filter keeps 1 / (2 σ √π) of white noise.
-    limit = THRESHOLD_SIGMA * noise / (2.0 * width * math.sqrt(math.pi))
+    # Less a wider one, so that the slope of a galaxy is nothing.
+    smooth -= gaussian_filter(clean, SURROUNDINGS * width, mode="constant", truncate=3.0)
+    # A Gaussian filter keeps 1 / (2 σ √π) of white noise; of the difference, the integral of its square.
+    kept = math.sqrt(1.0 + 1.0 / SURROUNDINGS**2 - 4.0 / (1.0 + SURROUNDINGS**2))
+    limit = THRESHOLD_SIGMA * noise * kept / (2.0 * width * math.sqrt(math.pi))
     reach = max(3, 2 * round(fwhm_px / 2) + 1)
     top = (smooth > limit) & (smooth == maximum_filter(smooth, size=reach, mode="nearest"))
     y, x = np.nonzero(top)
@@ -191,7 +196,9 @@ def _moments(clean: Image, x: Floats, y: Floats, fwhm_px: float) -> _Shapes:
     wxx, wyy = xx + WEIGHT_EXTRA_PX2, yy + WEIGHT_EXTRA_PX2
     near = _weighted(cuts, cx, cy, wxx, wyy, xy)[0].sum(axis=(1, 2))
     wide = _weighted(cuts, cx, cy, 4 * wxx, 4 * wyy, 4 * xy)[0].sum(axis=(1, 2))
-    gaussian = 4.0 * np.sqrt(_determinant(xx + wxx, yy + wyy, 2 * xy) / _determinant(xx + 4 * wxx, yy + 4 * wyy, 5 * xy))
+    near_area = _determinant(xx + wxx, yy + wyy, 2 * xy)
+    wide_area = _determinant(xx + 4 * wxx, yy + 4 * wyy, 5 * xy)
+    gaussian = 4.0 * np.sqrt(near_area / wide_area)
     x += np.where(alive, cx, 0.0)
     y += np.where(alive, cy, 0.0)
     middle, half_difference = (xx + yy) / 2, np.hypot((xx - yy) / 2, xy)
@@ -232,8 +239,8 @@ def _half_maximum_width(shape: _Shapes, saturated: NDArray[np.bool_]) -> Floats:
     factor = 1.0
     if len(known):
         image_px2 = float(np.median(shape.fwhm[known] / FWHM_PER_SIGMA)) ** 2
-        excess = float(np.median(shape.wings[known]))
-        factor = float(np.clip(1.0 - WINGS_TO_WIDTH * (1.0 + WINGS_DILUTION_PX2 / image_px2) * excess, NARROWEST_OF_MOMENTS, 1.0))
+        excess = float(np.median(shape.wings[known])) * (1.0 + WINGS_DILUTION_PX2 / image_px2)
+        factor = float(np.clip(1.0 - WINGS_TO_WIDTH * excess, NARROWEST_OF_MOMENTS, 1.0))
     return np.sqrt(np.maximum((shape.fwhm * factor) ** 2 - PIXEL_FWHM2_PX2, LEAST_FWHM_PX**2))
 
 

@@ -369,16 +369,15 @@ def test_a_campaign_whose_making_was_interrupted_is_said(tmp_path):
     assert "never finished" in sentence
 
 
-def test_a_frames_folder_with_an_odd_name(demo, tmp_path):
-    frames = tmp_path / os.fsdecode(b"n\xe4chte \x1b[2J")
-    lay(demo, frames, [V_LIGHT])
-    sequence, target = demo.place / "comparison.csv", "Odd,167.48125,21.63717,type_ia"
-    folder = tmp_path / "c"
-    said = fadeline("new", folder, "--frames", frames, "--sequence", sequence, "--target", target, "--scale", 1.021)
-    assert "\x1b" not in said.stderr
-    assert "\x1b" not in fadeline("log", folder).stdout
-    rows, _ = reduce_json(folder)
-    assert rows[NAME]["outcome"] == "measured"
+@pytest.mark.parametrize("name", [b"n\xe4chte", b"\x1b[2J"])
+def test_a_frames_folder_with_a_name_that_is_no_text_is_refused(demo, tmp_path, name):
+    frames = tmp_path / os.fsdecode(name)
+    frames.mkdir()
+    words = ["--frames", frames, "--sequence", demo.place / "comparison.csv", "--target", "Odd,167,21,type_ia"]
+    (sentence,) = fadeline("new", tmp_path / "c", *words, code=2).stderr.strip().splitlines()
+    assert sentence.isprintable()
+    assert "rename" in sentence
+    assert not (tmp_path / "c").exists()
 
 
 def test_a_campaign_is_not_made_over_another(demo, tmp_path):

@@ -256,3 +256,11 @@ def test_a_colour_far_from_the_comparison_stars_widens_err_band() -> None:
         colour = {"B": -0.5, "V": -0.5, "R": -0.1, "I": -0.2}[system.band]
         term = system.term.term_err * (colour - system.term.colour_mean)
         assert point.err_band == pytest.approx((0.01**2 + 0.02**2 + term**2) ** 0.5, rel=0.02)
+
+
+def test_points_say_how_the_light_of_the_host_was_taken_off() -> None:
+    field, measured = made(1, SHOTS[:8])
+    on_host = replace(TARGET, host_ra_deg=TARGET.ra_deg + 0.004, host_dec_deg=TARGET.dec_deg)
+    for target, method in ((TARGET, "annulus"), (on_host, "bent annulus")):
+        frames, nights = points(field, measured, target=target)
+        assert {point.host_method for point in (*frames, *nights)} == {method}

@@ -27,7 +27,7 @@ def is_true(field: RandomField, match: FieldMatch) -> bool:
 
 
 # common stars, detections and catalogue stars without counterpart, runs
-MIXES = [(8, 0, 0, 40), (8, 3, 3, 60), (12, 6, 6, 60), (25, 15, 15, 40), (40, 100, 20, 20), (40, 10, 40, 20)]
+MIXES = [(8, 0, 0, 30), (8, 3, 3, 40), (12, 6, 6, 30), (25, 15, 15, 20), (40, 100, 20, 10), (40, 10, 40, 10)]
 
 
 @pytest.mark.parametrize(("common", "only_seen", "only_known", "runs"), MIXES)
@@ -40,9 +40,20 @@ def test_finds_fields_of_any_rotation_parity_and_scale(common, only_seen, only_k
 
 def test_never_finds_a_field_that_is_not_there():
     rng = np.random.default_rng(77)
-    for n_seen, n_known in [(8, 8), (12, 30), (30, 30), (60, 200), (300, 100)] * 6:
+    for n_seen, n_known in [(8, 8), (12, 30), (30, 30), (60, 60), (200, 40)] * 2:
         field = random_field(rng, 0, n_seen, n_known)
         assert find(field).solution is None
+
+
+def test_coincidences_in_a_crowd_are_not_a_field():
+    # Every place of a crowded frame is near some star: six pairs are found for almost any plate, and prove nothing.
+    rng, side = np.random.default_rng(1), 256
+    for _ in range(2):
+        x, y = rng.uniform(0, side - 1, (2, 300))
+        crowd = seen(x, y, rng.uniform(1, 2, 300))
+        ra, dec = 150 + rng.uniform(0, side / 3600, 15), rng.uniform(0, side / 3600, 15)
+        mag = rng.uniform(10, 12, 15)
+        assert match_field(crowd, ra, dec, mag, FieldHint(scale_arcsec=1.0), (side, side)).solution is None
 
 
 def test_four_stars_are_enough_for_a_known_camera_only():

@@ -94,6 +94,18 @@ def test_on_a_host_the_light_at_the_star_is_found_where_a_plane_misses_it(place:
     assert found.level_e_px - 300.0 == pytest.approx(disc(x, y), rel=0.3)
 
 
+def test_what_a_sky_on_a_host_still_misses_is_in_its_error() -> None:
+    rows, columns = np.mgrid[0:300, 0:300].astype(float)
+    disc = 3000.0 * np.exp(-np.hypot((columns - 150.0) / 11.0, (rows - 150.0) / 8.0))
+    data = np.random.default_rng(10).poisson(300.0 + disc).astype(np.float32)
+    x, y = np.array([170.0, 40.0, 60.0, 250.0]), np.array([155.0, 40.0, 250.0, 60.0])
+    table = measure_stars(calibrated(data), x, y, FWHM, 1.0, NOBODY, on_host=np.array([True, False, False, False]))
+    here = 3000.0 * np.exp(-np.hypot(20.0 / 11.0, 5.0 / 8.0))
+    assert abs(table["sky_e_px"][0] - 300.0 - here) < 3.0 * table["sky_err_e_px"][0]
+    assert 0.1 * here < table["sky_err_e_px"][0] < 0.25 * here
+    assert (table["sky_err_e_px"][1:] < 1.5).all()
+
+
 def test_error_on_a_host_is_the_scatter_of_the_level() -> None:
     rng = np.random.default_rng(9)
     x, y = grid(500, 50, rng)

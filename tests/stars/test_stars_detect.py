@@ -23,11 +23,14 @@ def expose(image: np.ndarray, rng: np.random.Generator, sky_e: float = 300.0) ->
     return (rng.poisson(np.maximum(image, 0) + sky_e) + noise).astype(np.float32)
 
 
-def draw(profile: galsim.GSObject, places: np.ndarray, flux_e: np.ndarray, n: int = 512) -> np.ndarray:
-    """(n, n) electrons without sky; ``places`` (k, 2) are 0-based pixel coordinates."""
+def draw(profile: galsim.GSObject, places: np.ndarray, flux_e: np.ndarray, n: int = 512, reach: int = 50) -> np.ndarray:
+    """(n, n) electrons without sky; ``places`` (k, 2) are 0-based pixel coordinates, light ends at ``reach`` pixels."""
     image = galsim.ImageD(n, n, scale=1.0)
     for (x, y), flux in zip(places, flux_e, strict=True):
-        profile.withFlux(float(flux)).drawImage(image=image, center=galsim.PositionD(x + 1, y + 1), add_to_image=True)
+        column, row = round(x) + 1, round(y) + 1  # GalSim counts pixels from 1
+        about = galsim.BoundsI(column - reach, column + reach, row - reach, row + reach) & image.bounds
+        centre = galsim.PositionD(x + 1, y + 1)
+        profile.withFlux(float(flux)).drawImage(image=image[about], center=centre, add_to_image=True)
     return image.array
 
 
@@ -38,8 +41,8 @@ def grid(rng: np.random.Generator, step: int = 45, n: int = 512) -> np.ndarray:
 
 
 def found(data: np.ndarray, mask: np.ndarray | None = None, saturation_e: float = 1e9, most: int = 500):
-    return detect(data, np.zeros(data.shape, np.uint8) if mask is None else mask, saturation_e=saturation_e,
-                  max_stars=most)  # fmt: skip
+    good = np.zeros(data.shape, np.uint8)
+    return detect(data, good if mask is None else mask, saturation_e=saturation_e, max_stars=most)
 
 
 def nearest(places: np.ndarray, x: np.ndarray, y: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
@@ -56,7 +59,7 @@ PROFILES = {"Gaussian": galsim.Gaussian, "Moffat 2.5": lambda fwhm: galsim.Moffa
 @pytest.mark.parametrize("profile", PROFILES)
 def test_every_star_is_found_with_its_width_and_place(fwhm, profile):
     rng = np.random.default_rng(11)
-    places = grid(rng, step=max(45, int(8 * fwhm)))
+    places = grid(rng, step=max(50, int(9 * fwhm)))
     flux = 10 ** rng.uniform(4.3, 5.3, len(places))
     data = expose(draw(PROFILES[profile](fwhm=fwhm), places, flux), rng)
     stars = found(data)
@@ -72,14 +75,15 @@ def test_every_star_is_found_with_its_width_and_place(fwhm, profile):
     if fwhm >= 2:  # narrower images carry a phase error of a few thousandths of a pixel, more than their photon noise
         assert 0.8 < np.std(pull) < 1.3
     assert abs(np.mean(pull)) < 0.35
-    assert apart.max() < 0.1
-    # CEN-01: the limit of a Gaussian image without background; the window costs a fifth, the sky more.
-    if profile == "Gaussian" and fwhm >= 2:
+    assert (apart < 0.02 + 5 * error[index]).all()
+    # CEN-01: the limit of a Gaussian image without background; the window costs a fifth. Over larger images the sky
+    # is no longer small beside 1e5 electrons.
+    if profile == "Gaussian" and 2 <= fwhm <= 3:
         bright = flux > 1e5
         limit = centroid_error(math.sqrt(fwhm**2 + FWHM_PER_SIGMA**2 / 12), 1.0) / np.sqrt(flux[bright])
         ratio = error[index][bright] / limit
         assert (ratio > 1.1).all()
-        assert (ratio < (1.3 if fwhm <= 3 else 1.6)).all()
+        assert (ratio < 1.3).all()
 
 
 def test_brightest_first_and_no_more_than_asked():
@@ -96,11 +100,10 @@ def test_brightest_first_and_no_more_than_asked():
 @pytest.mark.parametrize("angle_deg", [10.0, 75.0, 130.0])
 def test_trailed_stars_are_long_and_point_along_the_trail(angle_deg):
     rng = np.random.default_rng(13)
-    places = grid(rng, 55)
-    step = np.array([math.cos(math.radians(angle_deg)), math.sin(math.radians(angle_deg))])
-    smeared = sum(draw(galsim.Gaussian(fwhm=3), places + t * step, np.full(len(places), 4e4 / 15))
-                  for t in np.linspace(-4, 4, 15))  # fmt: skip
-    stars = found(expose(smeared, rng))
+    places = grid(rng, 70)
+    trail = galsim.Box(8.0, 0.1).rotate(angle_deg * galsim.degrees)
+    smeared = galsim.Convolve(galsim.Gaussian(fwhm=3), trail)
+    stars = found(expose(draw(smeared, places, np.full(len(places), 4e4)), rng))
     _, apart = nearest(places, stars.x_px, stars.y_px)
     assert (apart < 1).mean() > 0.95
     assert np.median(stars.elongation) > 1.5
@@ -132,13 +135,13 @@ def test_a_large_galaxy_does_not_drown_its_field():
     places = grid(rng)
     places = places[np.hypot(places[:, 0] - 250, places[:, 1] - 260) > 60]
     image = draw(galsim.Gaussian(fwhm=3), places, np.full(len(places), 2e4))
-    image += draw(galsim.Convolve(galsim.Exponential(half_light_radius=45), galsim.Gaussian(fwhm=3)),
-                  np.array([[250.0, 260.0]]), np.array([3e6]))  # fmt: skip
+    galaxy = galsim.Convolve(galsim.Exponential(half_light_radius=45), galsim.Gaussian(fwhm=3))
+    image += draw(galaxy, np.array([[250.0, 260.0]]), np.array([3e6]), reach=512)
     stars = found(expose(image, rng))
     _, apart = nearest(places, stars.x_px, stars.y_px)
-    assert (apart < 1).mean() > 0.98
+    assert (apart < 1).all()
     assert frame_fwhm(stars) == pytest.approx(3, rel=0.05)
-    assert len(stars) < 1.3 * len(places)
+    assert len(stars) <= len(places) + 3  # the galaxy's core is one
 
 
 def test_hot_pixels_and_cosmic_rays_are_no_stars():

@@ -56,7 +56,7 @@ def test_difference_and_textual_leave_the_same_screen(programs: list[Tmux]) -> N
     programs += pair
     for keys, text in (
         ((), "wants"),
-        (("2",), "FWHM″"),
+        (("2",), "f Filter"),
         (("Up", "Up", "d"), "Dropped"),
         (("3",), "resid"),
         (("4", "Left", "Left", "x"), "Excluded"),
@@ -80,7 +80,7 @@ def test_poor_terminals_show_all_screens(programs: list[Tmux], env: dict[str, st
     programs.append(app)
     app.wait("wants")
     for key, text in (
-        ("2", "FWHM"),
+        ("2", "f Filter"),
         ("3", "resid"),
         ("4", "all bands"),
         ("5", "Stands on"),

@@ -67,7 +67,7 @@ def test_the_evening_of_an_observer(open_app, demo, tmp_path):
     first = wait_for_modulus(app)
     for key, text in (
         ("1", "latest frame"),
-        ("2", "FWHM"),
+        ("2", "f Filter"),
         ("3", "resid"),
         ("4", "O−C"),
         ("5", "Stands on: H0 = 73.04"),
