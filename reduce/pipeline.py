@@ -6,7 +6,7 @@ import hashlib
 import json
 import time
 from collections.abc import Iterable
-from dataclasses import dataclass, fields, replace
+from dataclasses import dataclass, replace
 from pathlib import Path
 from typing import Any
 
@@ -53,8 +53,6 @@ MEASURE_VERSION = 1
 MOST_STARS = 500
 LEAST_STAR_SNR = 10.0
 CLOSEST_TO_EDGE_FWHM = 2.0
-LEAST_RECOGNISED = 5
-"""So many stars of the sequence tell a frame's image width and trailing."""
 
 
 @dataclass(frozen=True, slots=True)
@@ -139,10 +137,9 @@ def _require(info: FrameInfo) -> None:
 def _measure_image(blank: Measured, adu: Image, image: CalibratedImage, info: FrameInfo, recipe: Recipe) -> Measured:
     detections = detect(image.data_e, image.mask, saturation_e=image.saturation_e)
     match = _find_field(detections, info, recipe, image.data_e.shape)
-    stars_only = _recognised(detections, match)
-    fwhm_px = frame_fwhm(stars_only)
+    fwhm_px = frame_fwhm(detections)
     if match.solution is None:
-        quality = _quality(image, detections, stars_only, fwhm_px, info, None, None, recipe.settings)
+        quality = _quality(image, detections, fwhm_px, info, None, None, recipe.settings)
         return replace(blank, outcome="no match", reason=match.reason, quality=quality)
     table = _measure_stars(adu, image, detections, fwhm_px, match.solution, recipe)
     growth_mag, growth_err_mag = growth_curve(table)
@@ -157,7 +154,7 @@ def _measure_image(blank: Measured, adu: Image, image: CalibratedImage, info: Fr
         growth_mag=growth_mag,
         growth_err_mag=growth_err_mag,
         bjd_tdb=float(bjd_tdb(info.mjd_mid, *centre, recipe.settings.site)),
-        quality=_quality(image, detections, stars_only, fwhm_px, info, centre, table, recipe.settings),
+        quality=_quality(image, detections, fwhm_px, info, centre, table, recipe.settings),
         stamps=pack(image, table, fwhm_px, match.solution),
     )
 
@@ -171,17 +168,6 @@ def _find_field(detections: Detections, info: FrameInfo, recipe: Recipe, shape: 
     if match.solution is not None or hint.scale_arcsec is None:
         return match
     return match_field(detections, stars.ra_deg, stars.dec_deg, mag, replace(hint, scale_arcsec=None), shape)
-
-
-def _recognised(detections: Detections, match: FieldMatch) -> Detections:
-    """Detections that are stars of the sequence: the pieces of a satellite's trail say nothing about image width.
-
-    All of them where too few were recognised.
-    """
-    index = np.sort(match.detected)
-    if (~detections.saturated[index]).sum() < LEAST_RECOGNISED:
-        return detections
-    return Detections(**{column.name: getattr(detections, column.name)[index] for column in fields(Detections)})
 
 
 def _scale(info: FrameInfo, settings: Settings) -> float | None:
@@ -238,7 +224,6 @@ def _measure_stars(
 def _quality(
     image: CalibratedImage,
     detections: Detections,
-    stars_only: Detections,
     fwhm_px: float,
     info: FrameInfo,
     centre: tuple[float, float] | None,
@@ -259,15 +244,15 @@ def _quality(
             telescope.aperture_m, air, info.exposure_s, site.height_m, telescope.scintillation_coefficient
         )
     bright = slice(0, 50)
-    angles = np.exp(2j * np.radians(stars_only.position_angle_deg[bright]))
+    angles = np.exp(2j * np.radians(detections.position_angle_deg[bright]))
     if table is not None and np.isfinite(table["sky_e_px"]).any():
         sky, sigma = float(np.nanmedian(table["sky_e_px"])), float(np.nanmedian(table["sky_sigma_e_px"]))
     else:
         sky, sigma = float(np.nanmedian(image.data_e[::8, ::8])), float("nan")
     return Quality(
         fwhm_px=fwhm_px,
-        elongation=float(np.median(stars_only.elongation[bright])) if len(stars_only) else float("nan"),
-        trail_agreement=float(abs(angles.mean())) if len(stars_only) else 0.0,
+        elongation=float(np.median(detections.elongation[bright])) if len(detections) else float("nan"),
+        trail_agreement=float(abs(angles.mean())) if len(detections) else 0.0,
         sky_e_px=sky,
         sky_sigma_e_px=sigma,
         n_detected=len(detections),

@@ -25,10 +25,19 @@ RATIO_TOLERANCE = 0.012
 LEAST_RATIO, MOST_RATIO = 0.15, 0.97
 """Needles say nothing, nearly equal sides are ambiguous."""
 CANDIDATES = 40
+CELL = 0.04
+"""Side of the boxes that similarities are counted in."""
 LEAST_STARS = 6
 LEAST_STARS_KNOWN_CAMERA = 4
 """When the scale is known to 2 % and the parity too."""
 LARGEST_RMS_PX = 1.0
+LEAST_RMS_PX = 0.05
+STRAY_RATIO = 8.0
+"""A pair is a stray when it misses by more than this times the rms of the others: with few stars the extrapolation
+alone reaches 4 or 5."""
+MOST_TO_LEAVE_OUT = 20
+"""In a larger number of pairs a stray of two pixels moves nothing."""
+LEAST_REACH_PX = 0.5
 CHANCE = 1e-8
 """Probability of as many coincidences, times the number of candidates looked at, that is still believed."""
 UNKNOWN_SCALE_ARCSEC = (0.05, 15.0)
@@ -163,8 +172,9 @@ class _Search:
         x, y = flat.real, flat.imag if start.mirrored else -flat.imag
         solution = None
         pairs = (np.zeros(0, dtype=np.int64), np.zeros(0, dtype=np.int64))
-        for tolerance in (6.0, 4.0, 3.0, 2.0, 2.0):
-            pairs = self._pairs(x, y, part, tolerance)
+        for tolerance in (6.0, 4.0, 3.0, 2.0, 2.0, None):
+            # The last fit is without the pairs that are only near each other by chance.
+            pairs = self._pairs(x, y, part, tolerance) if tolerance else self._without_strays(*pairs)
             if len(pairs[0]) < 3:
                 return None
             try:
@@ -183,9 +193,10 @@ class _Search:
         least = LEAST_STARS_KNOWN_CAMERA if self.known_camera else min(LEAST_STARS, max(n_expected, 5))
         if n_found < least:
             return None
-        if _chance(n_found, n_expected, len(self.seen), nx * ny, 2.0) * trials > CHANCE and not (
-            self.known_camera and n_found == n_expected
-        ):
+        # Coincidences do not fall as close together as true pairs do: few stars suffice when they fit well.
+        reach = min(max(3.0 * solution.rms_px, LEAST_REACH_PX), 2.0)
+        chance = _chance(n_found, n_expected, len(self.seen), nx * ny, reach) * trials
+        if chance > CHANCE and not (self.known_camera and n_found == n_expected):
             return None
         return FieldMatch(solution, pairs[0], pairs[1], "")
 
@@ -207,6 +218,31 @@ class _Search:
         index = np.flatnonzero(ok)
         mutual = back[nearest[ok]] == index
         return nearest[ok][mutual].astype(np.int64), part[usable][index[mutual]]
+
+    def _without_strays(
+        self, detected: NDArray[np.int64], catalogue: NDArray[np.int64]
+    ) -> tuple[NDArray[np.int64], NDArray[np.int64]]:
+        """Pairs without those whose residual, to a solution of all the others, is far beyond the others' own."""
+        ny, nx = self.shape
+        while len(detected) > LEAST_STARS:
+            worst, worst_ratio = -1, STRAY_RATIO
+            for k in range(len(detected)) if len(detected) <= MOST_TO_LEAVE_OUT else ():
+                seen, known = np.delete(detected, k), np.delete(catalogue, k)
+                try:
+                    rest = fit_solution(
+                        self.x[seen], self.y[seen], self.ra[known], self.dec[known], ((nx - 1) / 2, (ny - 1) / 2)
+                    )
+                except ValueError:
+                    continue
+                x, y = sky_to_pixel(rest, self.ra[catalogue[k]], self.dec[catalogue[k]])
+                miss = math.hypot(float(x) - self.x[detected[k]], float(y) - self.y[detected[k]])
+                ratio = miss / max(rest.rms_px, LEAST_RMS_PX)
+                if ratio > worst_ratio:
+                    worst, worst_ratio = k, ratio
+            if worst < 0:
+                break
+            detected, catalogue = np.delete(detected, worst), np.delete(catalogue, worst)
+        return detected, catalogue
 
     def _sane(self, solution: FieldSolution) -> bool:
         """Scale and parity as allowed, square pixels, small residuals."""
@@ -285,28 +321,28 @@ def _clusters(
     turn: NDArray[np.complex128], shift: NDArray[np.complex128], flat: NDArray[np.complex128], mirrored: bool
 ) -> list[_Similarity]:
     """Group similarities by where they put the middle of the frame, by scale and by rotation."""
-    from scipy.spatial import cKDTree
-
     middle = flat.mean()
     width = max(float(np.abs(flat - middle).max()), 1.0)
-    place = (turn * middle + shift) / np.median(np.abs(turn)) / width
+    size = np.abs(turn)
+    place = (turn * middle + shift) / np.median(size) / width
     # One unit of each coordinate moves a star at the edge by one field radius.
-    features = np.column_stack([
-        place.real, place.imag, np.log(np.abs(turn)), (turn / np.abs(turn)).real, (turn / np.abs(turn)).imag,
-    ])  # fmt: skip
-    tree = cKDTree(features)
-    votes = tree.query_ball_point(features, 0.03, return_length=True)
+    features = np.column_stack([place.real, place.imag, np.log(size), (turn / size).real, (turn / size).imag])
+    _, member, count = np.unique(
+        np.floor(features / CELL).astype(np.int64), axis=0, return_inverse=True, return_counts=True
+    )
+    member = member.reshape(-1)
     found: list[_Similarity] = []
-    taken = np.zeros(len(votes), bool)
-    for k in np.argsort(-votes, kind="stable"):
-        if taken[k]:
+    free = np.ones(len(turn), bool)
+    for cell in np.argsort(-count, kind="stable")[: 2 * CANDIDATES]:
+        inside = free & (member == cell)
+        if not inside.any():
             continue
-        members = np.array(sorted(tree.query_ball_point(features[k], 0.03)))
-        taken[members] = True
-        t = complex(np.median(turn[members].real), np.median(turn[members].imag))
-        centre = turn[members] * middle + shift[members]
+        near = free & (np.abs(features - np.median(features[inside], axis=0)).max(axis=1) < CELL)
+        free &= ~near
+        t = complex(np.median(turn[near].real), np.median(turn[near].imag))
+        centre = turn[near] * middle + shift[near]
         c = complex(np.median(centre.real), np.median(centre.imag))
-        found.append(_Similarity(t, c - t * middle, mirrored, int(votes[k])))
+        found.append(_Similarity(t, c - t * middle, mirrored, int(near.sum())))
         if len(found) >= CANDIDATES:
             break
     return found

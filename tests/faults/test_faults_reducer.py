@@ -148,9 +148,10 @@ def attempts(folder: Path) -> int:
 def test_killing_a_worker_costs_nothing(demo, tmp_path):
     folder = make_campaign(demo, tmp_path, LIGHTS[:4])
     process = start_reduce(folder, "--workers", "1")
-    wait_until(lambda: attempts(folder))
-    workers = [child for child in processes_below(process.pid) if parent(child) not in (process.pid, os.getpid())]
-    assert len(workers) == 1  # a child of the server that workers come from
+    workers = wait_until(  # children of the server that workers come from
+        lambda: [child for child in processes_below(process.pid) if parent(child) not in (process.pid, os.getpid())]
+    )
+    assert len(workers) == 1
     os.kill(workers[0], signal.SIGKILL)
     out, _ = process.communicate(timeout=ENOUGH_S)
     *rows, _summary = [json.loads(line) for line in out.splitlines()]

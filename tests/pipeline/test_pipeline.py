@@ -130,23 +130,6 @@ def test_a_target_on_its_host_is_measured_with_a_sky_of_its_own(demo, recipe):
     assert host["sky_n_px"][mine] < 0.7 * plain["sky_n_px"][mine]
 
 
-def test_satellites_trails_do_not_widen_the_frame(demo, recipe, tmp_path):
-    """Detection breaks a trail into pieces, which may outnumber the stars."""
-    from astropy.io import fits
-
-    with fits.open(demo.frames / LIGHT) as units:
-        data, header = units[0].data.astype(np.float32), units[0].header
-    y, x = np.indices(data.shape)
-    for offset in range(-400, 500, 90):  # the tracks of a train of satellites
-        data += 900.0 * np.exp(-0.5 * ((x - 0.9 * y - offset) / 2.5) ** 2)
-    fits.PrimaryHDU(np.rint(data).astype(np.int32), header).writeto(tmp_path / "trail.fits", output_verify="ignore")
-    clean, struck = measure(demo, recipe), measure_frame(tmp_path / "trail.fits", "trail", recipe)
-    assert struck.outcome == "measured"
-    assert struck.quality.n_detected > 1.1 * clean.quality.n_detected
-    assert struck.quality.fwhm_px == pytest.approx(clean.quality.fwhm_px, rel=0.02)
-    assert struck.quality.elongation == pytest.approx(clean.quality.elongation, abs=0.05)
-
-
 @pytest.mark.parametrize("factor", [0.5, 2.0])
 def test_a_scale_that_is_wrong_by_the_binning_does_not_lose_the_field(demo, recipe, factor):
     right = measure(demo, recipe)
