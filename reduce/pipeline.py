@@ -50,9 +50,19 @@ from reduce.stars.width import frame_fwhm
 MEASURE_VERSION = 1
 """Raise it when the same pixels would give other numbers: every frame is then measured again beside its old row."""
 
+SAME_SCALE = 0.02
+"""Relative; a camera's scale from one frame to another, with focus and temperature."""
 MOST_STARS = 500
 LEAST_STAR_SNR = 10.0
 CLOSEST_TO_EDGE_FWHM = 2.0
+
+
+@dataclass(frozen=True, slots=True)
+class KnownCamera:
+    """What the first recognised frame of a camera says of it; makes fields of few stars recognisable."""
+
+    scale_arcsec: float
+    mirrored: bool
 
 
 @dataclass(frozen=True, slots=True)
@@ -64,6 +74,8 @@ class Recipe:
     targets: tuple[Target, ...]
     astrometric: Sequence
     """Stars with known positions to find the field by; may be more than the comparison sequence."""
+    camera: KnownCamera | None = None
+    """Only of a frame that was not recognised without."""
 
     def digest(self) -> str:
         """SHA-256 of everything that decides the numbers."""
@@ -74,7 +86,9 @@ class Recipe:
         stars = hashlib.sha256()
         for array in (self.astrometric.ra_deg, self.astrometric.dec_deg, _ranking_mag(self.astrometric)):
             stars.update(np.ascontiguousarray(array, dtype="<f8").tobytes())
+        camera = {} if self.camera is None else {"camera": [self.camera.scale_arcsec, self.camera.mirrored]}
         return {
+            **camera,
             "version": MEASURE_VERSION,
             "settings": self.settings.model_dump(exclude={"photometry"}, mode="json"),
             "masters": self.masters.digests(),
@@ -164,6 +178,10 @@ def _find_field(detections: Detections, info: FrameInfo, recipe: Recipe, shape: 
     stars = recipe.astrometric
     mag = _ranking_mag(stars)
     hint = FieldHint(ra_deg=info.ra_deg, dec_deg=info.dec_deg, scale_arcsec=_scale(info, recipe.settings))
+    if recipe.camera is not None:
+        known = replace(hint, scale_arcsec=recipe.camera.scale_arcsec, scale_tolerance=SAME_SCALE,
+                        mirrored=recipe.camera.mirrored)  # fmt: skip
+        return match_field(detections, stars.ra_deg, stars.dec_deg, mag, known, shape)
     match = match_field(detections, stars.ra_deg, stars.dec_deg, mag, hint, shape)
     if match.solution is not None or hint.scale_arcsec is None:
         return match

@@ -7,6 +7,7 @@ from __future__ import annotations
 
 import fcntl
 import json
+import os
 import shutil
 import subprocess
 import sys
@@ -39,7 +40,8 @@ class FinishedDemo:
 
 @pytest.fixture(scope="session")
 def demo(tmp_path_factory: pytest.TempPathFactory) -> FinishedDemo:
-    shared = tmp_path_factory.getbasetemp().parent
+    mine = tmp_path_factory.getbasetemp()
+    shared = mine.parent if "PYTEST_XDIST_WORKER" in os.environ else mine
     place, result = shared / "demo-1", shared / "demo-1.json"
     with open(shared / "demo-1.lock", "w") as lock:
         fcntl.flock(lock, fcntl.LOCK_EX)

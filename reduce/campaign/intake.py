@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import time
 from collections.abc import Callable, Iterable, Mapping
-from dataclasses import asdict, dataclass, field
+from dataclasses import asdict, dataclass, field, replace
 from pathlib import Path
 from typing import Any
 
@@ -14,7 +14,7 @@ from reduce.frames.masters import build_master, standing_master
 from reduce.frames.reader import frame_id, open_frame
 from reduce.logbook.store import Logbook
 from reduce.logbook.store import Master as MasterRow
-from reduce.pipeline import Recipe
+from reduce.pipeline import KnownCamera, Recipe
 from reduce.plain_text import clean_text
 from reduce.records import FrameError, FrameInfo, Sequence, Target
 from reduce.settings import Settings
@@ -221,22 +221,45 @@ class Intake:
         """Masters for one frame."""
         return choose_masters(info, masters)
 
+    def recipes(
+        self,
+        frames: Iterable[KnownFrame],
+        masters: Iterable[Master],
+        targets: tuple[Target, ...],
+        astrometric: Sequence,
+    ) -> dict[str, tuple[Recipe, str]]:
+        """Light frame → how it is to be measured with these masters, and the digest of that.
+
+        A frame that was not recognised is tried again when another frame has shown its camera's scale and parity.
+        """
+        masters = list(masters)
+        lost = self.book.unrecognised()
+        digests: dict[tuple[object, ...], str] = {}
+
+        def with_digest(recipe: Recipe) -> tuple[Recipe, str]:
+            key = (*recipe.masters.digests(), recipe.camera)
+            if key not in digests:
+                digests[key] = recipe.digest()
+            return recipe, digests[key]
+
+        found = {}
+        for frame in frames:
+            if frame.info.kind != "light":
+                continue
+            recipe, digest = with_digest(self.recipe(frame.info, masters, targets, astrometric))
+            if (frame.id, digest) in lost and (first := self.book.first_solution(frame.info)) is not None:
+                camera = KnownCamera(round(first.scale_arcsec, 4), first.mirrored)
+                recipe, digest = with_digest(replace(recipe, camera=camera))
+            found[frame.id] = recipe, digest
+        return found
+
     def wanted_recipes(
         self, frames: Iterable[KnownFrame], targets: tuple[Target, ...], astrometric: Sequence
     ) -> dict[str, str]:
         """Light frame → digest of the recipe it should have, with the masters that stand."""
         frames = list(frames)
-        masters = self.standing_masters(frames)
-        digests: dict[tuple[str | None, ...], str] = {}
-        wanted = {}
-        for frame in frames:
-            if frame.info.kind == "light":
-                recipe = self.recipe(frame.info, masters, targets, astrometric)
-                key = tuple(recipe.masters.digests())
-                if key not in digests:
-                    digests[key] = recipe.digest()
-                wanted[frame.id] = digests[key]
-        return wanted
+        recipes = self.recipes(frames, self.standing_masters(frames), targets, astrometric)
+        return {frame: digest for frame, (_, digest) in recipes.items()}
 
     def calibration_sentences(self, frames: Iterable[KnownFrame]) -> tuple[tuple[str, ...], list[str]]:
         """One sentence a master, and one a kind of master that light frames lack."""

@@ -134,16 +134,17 @@ class _Batch:
         self.campaign, self.intake, self.workers = campaign, intake, workers
         self.progress, self.should_stop = progress, should_stop
         self.measured: set[str] = set()
-        self.done = 0
+        self.done = self.total = 0
 
     def run(self) -> None:
         """Measure what is pending, then estimate every target."""
         tasks, again = self._tasks()
         before = self.campaign.curve_points() if again else ()
-        self.total = len(tasks)
         if tasks:
             self._measure(tasks)
-
+            # What was not recognised may be, now that other frames have shown the camera's scale.
+            if not self.should_stop() and (second_look := self._tasks()[0]):
+                self._measure(second_look)
         self._say_what_came()
         if self.measured & again:
             self._say_what_moved(len(self.measured & again), before)
@@ -156,6 +157,7 @@ class _Batch:
 
     def _measure(self, tasks: list[MeasureTask]) -> None:
         book = self.campaign.book
+        self.done, self.total = 0, len(tasks)
         self.progress(f"measuring {self.total} frames")
         run_tasks(
             measure_task,
@@ -180,11 +182,11 @@ class _Batch:
         done = book.reductions_done()
         measured_once = {frame for frame, _ in done}
         tasks = []
+        recipes = self.intake.recipes(frames, masters, targets, stars)
         for frame in frames:
-            if frame.info.kind != "light":
+            if frame.id not in recipes:
                 continue
-            recipe = self.intake.recipe(frame.info, masters, targets, stars)
-            digest = recipe.digest()
+            recipe, digest = recipes[frame.id]
             if (frame.id, digest) not in done and frame.path.exists():
                 tasks.append(MeasureTask(frame.path, frame.id, recipe, digest))
         return tasks, {task.frame for task in tasks} & measured_once

@@ -39,6 +39,7 @@ MOST_TO_LEAVE_OUT = 20
 """In a larger number of pairs a stray of two pixels moves nothing."""
 LEAST_REACH_PX = 0.5
 CHANCE = 1e-8
+CHANCE_KNOWN_CAMERA = 1e-6
 """Probability of as many coincidences, times the number of candidates looked at, that is still believed."""
 UNKNOWN_SCALE_ARCSEC = (0.05, 15.0)
 
@@ -195,8 +196,9 @@ class _Search:
             return None
         # Coincidences do not fall as close together as true pairs do: few stars suffice when they fit well.
         reach = min(max(3.0 * solution.rms_px, LEAST_REACH_PX), 2.0)
-        chance = _chance(n_found, n_expected, len(self.seen), nx * ny, reach) * trials
-        if chance > CHANCE and not (self.known_camera and n_found == n_expected):
+        # A transformation takes three pairs, a known scale leaves two.
+        spent, limit = (2, CHANCE_KNOWN_CAMERA) if self.known_camera else (3, CHANCE)
+        if _chance(n_found - spent, n_expected - spent, len(self.seen), nx * ny, reach) * trials > limit:
             return None
         return FieldMatch(solution, pairs[0], pairs[1], "")
 
@@ -349,14 +351,11 @@ def _clusters(
 
 
 def _chance(n_found: int, n_expected: int, n_seen: int, area_px: float, radius_px: float) -> float:
-    """Probability that at least ``n_found`` of ``n_expected`` places hold one of the detections by chance.
-
-    Three pairs are spent on the transformation itself.
-    """
+    """Probability that at least ``n_found`` of ``n_expected`` places hold one of the detections by chance."""
     from scipy.stats import binom
 
     p = 1.0 - math.exp(-n_seen * math.pi * radius_px**2 / area_px)
-    return float(binom.sf(n_found - 4, max(n_expected - 3, 1), min(max(p, 1e-12), 1.0)))
+    return float(binom.sf(n_found - 1, max(n_expected, 1), min(max(p, 1e-12), 1.0)))
 
 
 def _middle(ra_deg: Floats, dec_deg: Floats) -> tuple[float, float]:

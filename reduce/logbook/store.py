@@ -22,13 +22,14 @@ from reduce.logbook.packing import (
     estimate_from_json,
     from_plain,
     measured_from_row,
+    optional,
     pack_stars,
     to_json,
 )
 from reduce.logbook.schema import STAMPED
 from reduce.logbook.stamps import read_stamps, write_stamps
 from reduce.plain_text import clean_text
-from reduce.records import Estimate, Measured, Target
+from reduce.records import Estimate, FieldSolution, FrameInfo, Measured, Target
 from reduce.records import Sequence as ComparisonSequence
 from reduce.views import EstimateRow
 
@@ -220,6 +221,25 @@ class Logbook(Log, Arrivals):
         return [
             frame for (frame,) in self._database.rows("SELECT frame FROM reduction GROUP BY frame ORDER BY min(rowid)")
         ]
+
+    def unrecognised(self) -> set[tuple[str, str]]:
+        """(frame, recipe) of every reduction that ended with "no match"."""
+        rows = self._database.rows("SELECT frame, recipe FROM reduction WHERE outcome = 'no match'")
+        return {(frame, recipe) for frame, recipe in rows}
+
+    def first_solution(self, like: FrameInfo) -> FieldSolution | None:
+        """Plate solution of the earliest recognised frame of the same camera, size and binning."""
+        rows = self._database.rows(
+            "SELECT info, solution FROM reduction WHERE outcome = 'measured' AND camera = ? ORDER BY mjd_mid, frame",
+            (like.camera,),
+        )
+        for info_text, solution_text in rows:
+            info, solution = optional(FrameInfo, info_text), optional(FieldSolution, solution_text)
+            if info is None or solution is None:
+                continue
+            if (info.nx, info.ny, info.binning) == (like.nx, like.ny, like.binning):
+                return solution
+        return None
 
     def newest_reductions(self, wanted: Mapping[str, str] | None = None) -> list[Measured]:
         """One reduction a frame, by mid-exposure: that of the wanted recipe if there is one, else the newest.

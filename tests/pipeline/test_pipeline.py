@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import json
 import random
 from dataclasses import fields, replace
 from pathlib import Path
@@ -26,7 +27,7 @@ from reduce.field.wcs import pixel_to_sky
 from reduce.frames.master_sets import ChosenMasters, Master, Signature
 from reduce.frames.reader import frame_id
 from reduce.logbook.store import Logbook
-from reduce.pipeline import Recipe, measure_frame, solve
+from reduce.pipeline import KnownCamera, Recipe, measure_frame, solve
 from reduce.records import Choices
 from reduce.settings import read_settings
 
@@ -219,3 +220,35 @@ def test_reducing_again_measures_nothing_and_changes_no_number(demo, tmp_path):
         reports = list(campaign.reduce(workers=1))
         assert [report.summary["measured_now"] for report in reports] == [0]
         assert (repr(campaign.solution()), campaign.book.reductions_done(), campaign.log()) == before
+
+
+def test_a_known_camera_finds_a_field_of_four_stars(demo, recipe):
+    """Scale and parity of an earlier frame make four stars enough; without them they are not believed."""
+    whole = recipe.astrometric
+    bright = np.argsort(whole.mag["V"])[:4]
+    four = replace(
+        whole, ids=tuple(whole.ids[k] for k in bright), ra_deg=whole.ra_deg[bright], dec_deg=whole.dec_deg[bright],
+        mag={band: mag[bright] for band, mag in whole.mag.items()},
+        mag_err={band: err[bright] for band, err in whole.mag_err.items()},
+    )  # fmt: skip
+    full = measure(demo, recipe)
+    poor = replace(recipe, astrometric=four)
+    assert measure(demo, poor).outcome == "no match"
+    camera = KnownCamera(round(full.solution.scale_arcsec, 4), full.solution.mirrored)
+    found = measure(demo, replace(poor, camera=camera))
+    assert found.outcome == "measured"
+    assert found.recipe != poor.digest()
+    here = full.stars[full.stars["role"] == 1][0]
+    there = found.stars[found.stars["role"] == 1][0]
+    assert np.hypot(here["x_px"] - there["x_px"], here["y_px"] - there["y_px"]) < 0.3
+
+
+def test_a_lost_frame_gets_a_second_look_when_its_camera_is_known(demo):
+    with Logbook.open(demo.campaign) as book:
+        truth = json.loads((demo.place / "truth.json").read_text())
+        foreign = next(frame["file"] for frame in truth["frames"] if frame["fault"] == "another field")
+        frame = next(key for key, name in book.file_names().items() if name == foreign)
+        recipes = {recipe for lost, recipe in book.unrecognised() if lost == frame}
+        assert len(recipes) == 2
+        info = next(row.info for row in book.newest_reductions() if row.frame == frame)
+        assert book.first_solution(info).scale_arcsec == pytest.approx(1.021, rel=0.002)
