@@ -198,10 +198,6 @@ class Campaign:
             f"({names[0]}{', …' if len(names) > 1 else ''}); fadeline inspect says why."
         ]
 
-    def problems(self) -> dict[Path, str]:
-        """Files that could not be used → why."""
-        return {path: problem.sentence for path, problem in self.book.problems().items()}
-
     @cached_property
     def intake(self) -> Intake:
         """The campaign's files."""

@@ -21,6 +21,8 @@ if TYPE_CHECKING:
     from reduce.campaign.door import Campaign
     from reduce.campaign.intake import KnownFrame
 
+UNIX_EPOCH_MJD = 40587.0
+
 
 def take_snapshot(campaign: Campaign) -> Snapshot:
     """One immutable picture; reads the logbook only, never a frame."""
@@ -77,24 +79,28 @@ def take_snapshot(campaign: Campaign) -> Snapshot:
 
 
 def frame_rows(campaign: Campaign, solution: Solution) -> tuple[FrameRow, ...]:
-    """Every file of the campaign by time, those that cannot be read last."""
+    """Every file of the campaign by time; one that cannot be read stands where it was last written."""
     measured = {row.frame: row for row in campaign.measured()}
     wanted = campaign.wanted_recipes()
     points: dict[str, list[Point]] = {}
     for point in solution.frame_points:
         points.setdefault(point.file or "", []).append(point)
     maker = _RowMaker(campaign.settings, campaign.targets(), campaign.sequence(), solution)
-    rows = []
+    rows: list[tuple[float, FrameRow]] = []
+
+    def add(row: FrameRow, mjd: float) -> None:
+        rows.append((mjd, row))
+
     for frame in campaign.known_frames():
         if frame.info.kind in ("bias", "dark", "flat"):
-            rows.append(maker.calibration(frame))
+            add(maker.calibration(frame), frame.info.mjd_mid or 0.0)
         elif frame.info.kind == "light":
             row = measured.get(frame.id)
             stale = row is not None and row.recipe != wanted.get(frame.id, row.recipe)
-            rows.append(maker.light(frame, row, stale, points.get(frame.id, ())))
-    rows.sort(key=lambda row: (row.mjd or 0.0, row.file))
-    rows += [maker.problem(path, sentence) for path, sentence in sorted(campaign.problems().items())]
-    return tuple(rows)
+            add(maker.light(frame, row, stale, points.get(frame.id, ())), frame.info.mjd_mid or 0.0)
+    for path, problem in campaign.book.problems().items():
+        add(maker.problem(path, problem.sentence), UNIX_EPOCH_MJD + problem.mtime_ns / 86400e9)
+    return tuple(row for _, row in sorted(rows, key=lambda item: (item[0], item[1].path)))
 
 
 class _RowMaker:
