@@ -265,6 +265,10 @@ class Sequence:
         return len(self.ids)
 
 
+HOST_REACH_ARCSEC = 30.0
+"""Farther from its host's centre a target stands on what a plane describes (common practice)."""
+
+
 @dataclass(frozen=True, slots=True)
 class Target:
     """What is followed. ``ebv_mw`` None means the Milky Way's reddening is unknown, not that it is zero."""
@@ -285,8 +289,12 @@ class Target:
 
     @property
     def on_host(self) -> bool:
-        """Whether it lies on a galaxy, as the observer says by stating the galaxy's centre."""
-        return self.host_ra_deg is not None and self.host_dec_deg is not None
+        """Whether the light of its galaxy bends under it: the stated centre is nearer than HOST_REACH_ARCSEC."""
+        if self.host_ra_deg is None or self.host_dec_deg is None:
+            return False
+        east = (self.host_ra_deg - self.ra_deg + 180.0) % 360.0 - 180.0
+        away = np.hypot(east * np.cos(np.radians(self.dec_deg)), self.host_dec_deg - self.dec_deg)
+        return bool(away * 3600.0 < HOST_REACH_ARCSEC)
 
 
 @dataclass(frozen=True, slots=True)

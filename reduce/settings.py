@@ -5,7 +5,7 @@ from __future__ import annotations
 import tomllib
 from difflib import get_close_matches
 from pathlib import Path
-from typing import Annotated, Any
+from typing import Annotated, Any, Literal
 
 from pydantic import BaseModel, ConfigDict, Field, ValidationError
 
@@ -72,7 +72,7 @@ class Settings(_Table):
     site: Site | None = None
     telescope: Telescope = Telescope()
     camera: Camera = Camera()
-    filters: dict[str, str] = {}
+    filters: dict[str, Literal["B", "V", "R", "I", "g", "r", "i"]] = {}
     """Filter name in headers → band letter, before the built-in table."""
     photometry: Photometry = Photometry()
 

@@ -114,6 +114,7 @@ def _target(text: str, ebv_mw: str | None, host: str | None, reference: Path | N
               help="What is followed; KIND is type_ia, cepheid, rr_lyrae or other. Repeatable.")  # fmt: skip
 @click.option("--ebv-mw", metavar="E[,SCALE]",
               help="Milky Way E(B−V) of the first target; SCALE is SF11 (default) or SFD.")  # fmt: skip
+@click.option("--spectrum", metavar="TYPE", help="Spectroscopic type of the first target, when a spectrum was taken.")
 @click.option("--host", metavar="RA,DEC", help="Centre of the host galaxy of the first target, degrees.")
 @click.option("--reference", type=FOLDER, help="Folder of frames without the supernova; never used as science.")
 @click.option("--scale", type=click.FloatRange(0.01, 60), metavar="ARCSEC_PER_PIXEL", help="Pixel scale, unbinned.")
@@ -125,18 +126,23 @@ def new(
     sequence: Path,
     targets: tuple[str, ...],
     ebv_mw: str | None,
+    spectrum: str | None,
     host: str | None,
     reference: Path | None,
     scale: float | None,
     site: str | None,
 ) -> None:
     """Start a campaign in DIR for the frames that lie, or will land, in a folder."""
+    from dataclasses import replace
+
     from reduce.campaign.door import Campaign
+    from reduce.plain_text import clean_text
 
     parsed = [
         _target(text, ebv_mw if first else None, host if first else None, reference if first else None)
         for first, text in zip([True] + [False] * len(targets), targets, strict=False)
     ]
+    parsed[0] = replace(parsed[0], spectroscopic_type=clean_text(spectrum, 20) if spectrum else None)
     place = _numbers(site, "LAT,LON,HEIGHT", "--site") if site else None
     campaign = Campaign.create(folder, frames, sequence, parsed, scale_arcsec=scale, site=place)
     click.echo(f"Campaign in {folder}: {len(campaign.targets())} target(s), frames in {frames}.", err=True)
@@ -241,7 +247,7 @@ def curve(folder: Path, target: str | None, per_frame: bool, all_stars: bool, as
     if as_json:
         _print_json([point_to_json(point) for point in points])
         return
-    click.echo("night       band  MJD (UTC)      mag      err     night   band    state     frames")
+    click.echo("night       band  MJD (UTC)      mag      err     err_night err_band state  frames")
     for p in points:
         mag = "   –   " if p.mag is None else f"{p.mag:7.3f}"
         errors = "  ".join("  –   " if e is None else f"{e:6.4f}" for e in (p.err, p.err_night, p.err_band))
@@ -320,7 +326,7 @@ def log(folder: Path, search: str | None, target_name: str | None, as_json: bool
     type=click.Choice(["ecsv", "csv"]),
     help="Default: from the file's ending, else ecsv.",
 )
-@click.option("--output", "-o", type=FILE, help="File to write; default: standard output.")
+@click.option("--output", "-o", type=FILE, help="File to write; - or nothing: standard output.")
 @click.option("--per-frame", is_flag=True, help="One row a frame instead of one a night and band.")
 @plainly
 def export(
@@ -328,6 +334,8 @@ def export(
 ) -> None:
     """Write the calibrated light curve as an ECSV table or CSV."""
     campaign = _campaign(folder)
+    if output == Path("-"):
+        output = None
     by_name: Literal["ecsv", "csv"] = "csv" if output is not None and output.suffix.lower() == ".csv" else "ecsv"
     chosen = style or by_name
     n = campaign.export(campaign.target(target).name, output, chosen, per_frame=per_frame)
@@ -422,6 +430,7 @@ def _watch_demo(place: Path, campaign_folder: Path) -> None:
         run_app(campaign_folder)
     finally:
         stop.set()
+    click.echo(f"The demo lies in {place}; open it again with: fadeline open {campaign_folder}")
 
 
 if __name__ == "__main__":

@@ -73,7 +73,15 @@ def _campaign(folder: Path) -> list[Finding]:
         campaign = Campaign.open(folder)
     except PlainError as error:
         return [Finding(False, str(error))]
-    findings = [Finding(True, f"Campaign with {len(campaign.targets())} target(s), logbook sound.")]
+    damage = campaign.book.check()
+    findings = [
+        Finding(not damage, damage or f"Logbook sound; followed: {', '.join(t.name for t in campaign.targets())}."),
+        Finding(
+            campaign.frames_folder.is_dir(),
+            f"Frames folder {campaign.frames_folder}"
+            + ("." if campaign.frames_folder.is_dir() else " is not there: mount its disk or put it back."),
+        ),
+    ]
     free = shutil.disk_usage(folder).free
     findings.append(
         Finding(

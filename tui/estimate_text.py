@@ -22,6 +22,7 @@ def estimate_lines(estimate: Estimate) -> list[str]:
             f"host E(B−V) {_with_error(estimate.e_host, estimate.e_host_err, 3)}   "
             f"χ² {_with_error(estimate.chi2, None, 1)} of {estimate.n} points"
         )
+        lines.append("  (χ² allows for all errors and the scatter of real supernovae about the model)")
     if estimate.scale:
         lines.append(f"  scale: {estimate.scale}")
     lines += [f"  {line.mag:6.3f} mag  {line.component}  {line.note}".rstrip() for line in estimate.budget]

@@ -5,6 +5,7 @@ from __future__ import annotations
 import asyncio
 import os
 import signal
+import sys
 from concurrent.futures import ProcessPoolExecutor
 from concurrent.futures.process import BrokenProcessPool
 from multiprocessing import get_context
@@ -95,7 +96,7 @@ class LiveDesk:
 
     def undo(self) -> str:
         """Take the newest decision back."""
-        return self._book.undo(who())
+        return self._book.undo(who()).removeprefix("taken back: ")
 
     def note(self, target: str, body: str) -> None:
         """Append a note."""
@@ -126,6 +127,8 @@ def run_app(folder: Path) -> None:
     """
     if not (folder / FILE_NAME).exists():
         raise PlainError(f"{folder.resolve()} holds no campaign; try: fadeline demo, or make one with: fadeline new.")
+    if not (sys.stdin.isatty() and sys.stdout.isatty()):
+        raise PlainError(f"The app needs a terminal; without one use: fadeline reduce {folder}")
     prepare_environment(os.environ)
     prepare_processes(("reduce.campaign.picture",))
     from tui.app import FadelineApp

@@ -5,7 +5,7 @@ from __future__ import annotations
 import hashlib
 import json
 from collections.abc import Iterator, Sequence
-from dataclasses import asdict
+from dataclasses import asdict, replace
 from pathlib import Path
 
 from reduce.candles.candle import candle_for
@@ -18,7 +18,12 @@ from reduce.version import version
 def estimate_target(target: Target, night_points: Sequence[Point]) -> Estimate:
     """Fit the target's nightly points with the relation of its kind."""
     mine = [point for point in night_points if point.star == target.name]
-    return candle_for(target.kind).fit(to_light_curve(mine), target)
+    found = candle_for(target.kind).fit(to_light_curve(mine), target)
+    doubtful = sum(point.state == "doubtful" for point in mine)
+    if found.mu is None and doubtful:
+        left_out = f"{doubtful} doubtful nightly points are left out: keep their frames to use them."
+        found = replace(found, verdict=f"{found.verdict} {left_out}")
+    return found
 
 
 def estimate_file(path: Path) -> Iterator[Estimate]:

@@ -273,8 +273,8 @@ class Intake:
         )
         missing: dict[str, None] = {}
         for frame in frames:
-            if frame.info.kind != "light":
-                continue
+            if frame.info.kind != "light" or not (frame.info.band or frame.info.filter_name):
+                continue  # without a filter it cannot be measured, and no flat would help
             chosen = self.chosen(frame.info, masters)
             band = frame.info.band or clean_text(frame.info.filter_name)
             if chosen.flat is None:

@@ -249,7 +249,7 @@ class _Batch:
             else "no nightly point moved by more than 1 mmag"
         )
         self.campaign.book.note(
-            "", f"{n} frames measured again with newer calibration: {words}.", PROGRAM, kind="event"
+            "", f"{n} frames measured again, calibration or settings having changed: {words}.", PROGRAM, kind="event"
         )
 
     # ---- report ------------------------------------------------------------------------------------------
@@ -288,8 +288,12 @@ class _Batch:
         }
         sentence = (
             f"{len(shown)} frames: {counts['kept']} kept, {counts['doubtful']} doubtful, {counts['dropped']} dropped "
-            f"({unreadable} unreadable); {len(self.measured)} measured now in {seconds:.0f} s."
+            f"({unreadable} of them unusable files); {len(self.measured)} measured now in {seconds:.0f} s."
         )
+        if self.intake.waiting:
+            sentence += f" {len(self.intake.waiting)} still being written."
+        if self.should_stop():
+            sentence += " Stopped before the rest; the next run goes on from here."
         sentence = " ".join([sentence, *self.campaign.unused_files()])
         return Report(tuple(rows), summary, sentence)
 

@@ -169,6 +169,16 @@ def _clean(value: Any) -> Any:
 
 
 def _replace(path: Path, text: str) -> None:
+    """Put the text in the place of a file, behind a link too; what is no file (a device, a pipe) is written to."""
+    path = path.resolve()
+    if path.exists() and not path.is_file():
+        try:
+            path.write_text(text, encoding="utf-8")
+        except OSError as error:
+            raise ExportError(
+                f"{clean_text(path, 300)} cannot be written: {clean_text(error.strerror or error)}."
+            ) from error
+        return
     part = path.with_name(f".{path.name}.{os.getpid()}.part")
     try:
         try:

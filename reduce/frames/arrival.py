@@ -13,7 +13,7 @@ from collections.abc import Callable, Iterator
 from dataclasses import dataclass
 from pathlib import Path
 
-from reduce.frames.extent import declared_units
+from reduce.frames.extent import CutShort, declared_units
 from reduce.records import FrameError
 
 SUFFIXES = (".fits", ".fit", ".fts")
@@ -50,11 +50,13 @@ def _scan(folder: Path) -> Iterator[tuple[Path, Stamp]]:
 
 
 def completeness(path: Path) -> str | None:
-    """None for a whole file, else what it lacks in one sentence."""
+    """What a file lacks that may still be written, in one sentence; None for a whole file and for no FITS file."""
     try:
         declared_units(path)
-    except FrameError as error:
+    except CutShort as error:
         return str(error)
+    except FrameError:
+        return None
     return None
 
 

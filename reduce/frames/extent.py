@@ -27,6 +27,10 @@ MOST_PACKING = 4000
 _GZIP_MAGIC = b"\x1f\x8b"
 
 
+class CutShort(FrameError):
+    """The file is shorter than it says: it may still be written."""
+
+
 @dataclass(frozen=True, slots=True)
 class DeclaredUnit:
     """One header and what it declares."""
@@ -62,7 +66,7 @@ def declared_units(path: Path) -> list[DeclaredUnit]:
         with open(path, "rb") as file:
             size = os.fstat(file.fileno()).st_size
             if size == 0:
-                raise FrameError("the file is empty (0 bytes); copy it again.")
+                raise CutShort("the file is empty (0 bytes); copy it again.")
             packed = file.read(2) == _GZIP_MAGIC
             file.seek(0)
             if not packed:
@@ -85,7 +89,7 @@ def _walk(file: BinaryIO | gzip.GzipFile, size: int | None) -> Iterator[Declared
         if size is not None and unit.end > size:
             # Some writers leave the last block unpadded: all data are there.
             if size < start + _bare_data_bytes(cards):
-                raise FrameError(_cut_short(size, unit.end))
+                raise CutShort(_cut_short(size, unit.end))
         elif size is None:
             _skip_packed(file, unit.end - start, unit.end)
         yield unit
@@ -104,7 +108,7 @@ def _read_header(file: BinaryIO | gzip.GzipFile, first: bool) -> dict[str, str] 
         if n == 0 and not first and not block.startswith(b"XTENSION"):
             return None
         if len(block) < BLOCK and b"END" not in block:
-            raise FrameError(f"the file is cut short: its header ends after {file.tell()} bytes; copy it again.")
+            raise CutShort(f"the file is cut short: its header ends after {file.tell()} bytes; copy it again.")
         for k in range(0, len(block), 80):
             card = block[k : k + 80].decode("ascii", "replace")
             key = card[:8].strip()
@@ -120,7 +124,7 @@ def _skip_packed(file: BinaryIO | gzip.GzipFile, n_bytes: int, end: int) -> None
     while left > 0:
         got = len(file.read(min(left, 1 << 20)))
         if got == 0 and left >= BLOCK:
-            raise FrameError(_cut_short(end - left, end))
+            raise CutShort(_cut_short(end - left, end))
         if got == 0:
             return
         left -= got

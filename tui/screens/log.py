@@ -78,12 +78,12 @@ class LogScreen(CampaignScreen):
         self.query_one("#search", Input).focus()
 
     def on_key(self, event: Key) -> None:
-        """Escape leaves a line; out of the search line it shows the whole log again."""
-        if event.key != "escape" or not isinstance(self.focused, Input):
+        """Escape leaves a line; from elsewhere it ends a search: the whole log is shown again."""
+        if event.key != "escape" or not (isinstance(self.focused, Input) or self._found is not None):
             return
         event.stop()
-        if self.focused.id == "search":
-            self.focused.value = ""
+        if not isinstance(self.focused, Input) or self.focused.id == "search":
+            self.query_one("#search", Input).value = ""
             self._found = None
         self.query_one(RowTable).focus()
         self.draw()
