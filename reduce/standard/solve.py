@@ -288,9 +288,11 @@ class _Group:
         rows = []
         for star in np.flatnonzero(np.isfinite(self.catalogue)):
             k = column.get(int(star))
-            n = int(joint.used[:, k].sum()) if k is not None else 0
+            # A clouded frame has a zero point of its own, but says nothing about its stars.
+            used = joint.used[:, k] & self.speaking if k is not None else np.zeros(len(self.frames), bool)
+            n = int(used.sum())
             aside = joint.set_aside.get(k) if k is not None else None
-            residual = np.zeros(0) if k is None else joint.residual[:, k][joint.used[:, k] | (aside is not None)]
+            residual = np.zeros(0) if k is None else joint.residual[:, k][used | ((aside is not None) & self.speaking)]
             measured = residual[np.isfinite(residual)]
             if aside is not None:
                 word, reason = "set aside", aside
