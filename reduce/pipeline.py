@@ -92,7 +92,7 @@ class Recipe:
             "version": MEASURE_VERSION,
             "settings": self.settings.model_dump(exclude={"photometry"}, mode="json"),
             "masters": self.masters.digests(),
-            "targets": [[target.name, target.ra_deg, target.dec_deg, target.on_host] for target in self.targets],
+            "targets": [[target.name, target.ra_deg, target.dec_deg, target.host_arcsec] for target in self.targets],
             "astrometric": stars.hexdigest(),
         }
 
@@ -216,7 +216,7 @@ def _measure_stars(
     for tx, ty in zip(target_x[inside], target_y[inside], strict=True):
         away &= np.hypot(x - tx, y - ty) > fwhm_px
     x, y, found = x[away][:MOST_STARS], y[away][:MOST_STARS], found[away][:MOST_STARS]
-    hosts = np.array([target.on_host for target in recipe.targets], bool)
+    hosts = np.array([np.nan if t.host_arcsec is None else t.host_arcsec for t in recipe.targets])
     all_x = np.concatenate([x, target_x[inside]])
     all_y = np.concatenate([y, target_y[inside]])
     neighbours = np.column_stack([
@@ -227,7 +227,7 @@ def _measure_stars(
         image, all_x, all_y, fwhm_px, solution.scale_arcsec, neighbours,
         centred=np.concatenate([found, np.zeros(int(inside.sum()), bool)]), raw_adu=adu,
         linear_limit_adu=recipe.settings.camera.linear_limit_adu,
-        on_host=np.concatenate([np.zeros(len(x), bool), hosts[inside]]),
+        host_arcsec=np.concatenate([np.full(len(x), np.nan), hosts[inside]]),
     )  # fmt: skip
     table["ra_deg"], table["dec_deg"] = pixel_to_sky(solution, all_x, all_y)
     for row, k in enumerate(np.flatnonzero(inside), start=len(x)):

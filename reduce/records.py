@@ -265,10 +265,6 @@ class Sequence:
         return len(self.ids)
 
 
-HOST_REACH_ARCSEC = 30.0
-"""Farther from its host's centre a target stands on what a plane describes (common practice)."""
-
-
 @dataclass(frozen=True, slots=True)
 class Target:
     """What is followed. ``ebv_mw`` None means the Milky Way's reddening is unknown, not that it is zero."""
@@ -288,13 +284,13 @@ class Target:
     reference_folder: str | None = None
 
     @property
-    def on_host(self) -> bool:
-        """Whether the light of its galaxy bends under it: the stated centre is nearer than HOST_REACH_ARCSEC."""
+    def host_arcsec(self) -> float | None:
+        """Distance from the centre of its host galaxy, as far as the observer said where that is."""
         if self.host_ra_deg is None or self.host_dec_deg is None:
-            return False
+            return None
         east = (self.host_ra_deg - self.ra_deg + 180.0) % 360.0 - 180.0
-        away = np.hypot(east * np.cos(np.radians(self.dec_deg)), self.host_dec_deg - self.dec_deg)
-        return bool(away * 3600.0 < HOST_REACH_ARCSEC)
+        north = self.host_dec_deg - self.dec_deg
+        return round(3600.0 * float(np.hypot(east * np.cos(np.radians(self.dec_deg)), north)), 2)
 
 
 @dataclass(frozen=True, slots=True)

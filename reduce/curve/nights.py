@@ -81,7 +81,7 @@ class _PointMaker:
 
     def __init__(self, visit: Visit, target: Target, choices: Choices, passband: Mapping[str, float]) -> None:
         self.visit = visit
-        self.host_method = "bent annulus" if target.on_host else "annulus"
+        self.host_method = "bent annulus" if target.host_arcsec is not None else "annulus"
         system, term = visit.system, visit.system.term
         self.known = bool(np.isfinite(visit.colour))
         self.colour = visit.colour if self.known else float(np.nan_to_num(term.colour_mean))

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import math
 from dataclasses import replace
-from typing import Any
+from typing import Any, Literal
 
 import numpy as np
 from numpy.typing import NDArray
@@ -35,6 +35,9 @@ WIDTH_SNR = 10.0
 """Below it the width of a single star is not stated."""
 BLOCK_PX = 60_000
 """Pixels of cut-outs worked on together: they then stay in the processor's cache."""
+
+INSIDE_HOST_ARCSEC = 30.0
+"""Nearer to a galaxy's centre its light bends much, farther little (common practice)."""
 
 
 def ladder_radii_px(fwhm_px: float, scale_arcsec: float) -> Floats:
@@ -85,7 +88,7 @@ def measure_stars(
     centred: NDArray[np.bool_] | None = None,
     raw_adu: Image | None = None,
     linear_limit_adu: float | None = None,
-    on_host: NDArray[np.bool_] | None = None,
+    host_arcsec: Floats | None = None,
 ) -> NDArray[Any]:
     """Fluxes of many stars at their given positions.
 
@@ -106,8 +109,8 @@ def measure_stars(
         (ny, nx) frame as read, for ``peak_adu``; without it the peak is that of the calibrated frame over the gain.
     linear_limit_adu
         Peak above which NON_LINEAR is set.
-    on_host
-        (n,) True where the sky is that of a galaxy. None: nowhere.
+    host_arcsec
+        (n,) distance from the centre of the galaxy that the star lies on, NaN where it lies on none. None: nowhere.
 
     Returns
     -------
@@ -128,11 +131,11 @@ def measure_stars(
     usable = (image.mask == 0) & np.isfinite(image.data_e)
     sky = annulus_sky(image.data_e, usable, neighbours_xy, x_px, y_px, fwhm_px)
     _write_sky(table, np.ones(n, bool), sky)
-    if on_host is not None and on_host.any():
-        place = x_px[on_host], y_px[on_host]
-        near = annulus_sky(image.data_e, usable, neighbours_xy, *place, fwhm_px, on_host=True)
+    for host, there in _on_hosts(host_arcsec):
+        place = x_px[there], y_px[there]
+        near = annulus_sky(image.data_e, usable, neighbours_xy, *place, fwhm_px, host=host)
         host_e_px = np.maximum(near.level_e_px - np.nanmedian(sky.level_e_px), 0.0)
-        _write_sky(table, on_host, replace(near, err_e_px=np.hypot(near.err_e_px, HOST_MISS * host_e_px)))
+        _write_sky(table, there, replace(near, err_e_px=np.hypot(near.err_e_px, HOST_MISS * host_e_px)))
 
     radii = ladder_radii_px(fwhm_px, scale_arcsec)
     half = math.ceil(radii.max() + 0.5) + 1
@@ -152,6 +155,17 @@ def measure_stars(
 def _write_sky(table: NDArray[Any], where: NDArray[np.bool_], sky: SkyLevels) -> None:
     table["sky_e_px"][where], table["sky_sigma_e_px"][where] = sky.level_e_px, sky.sigma_e_px
     table["sky_err_e_px"][where], table["sky_n_px"][where] = sky.err_e_px, sky.n_px
+
+
+def _on_hosts(host_arcsec: Floats | None) -> list[tuple[Literal["outskirts", "inside"], NDArray[np.bool_]]]:
+    """Which stars lie in the outskirts of a galaxy and which inside; nothing for those on none (NaN)."""
+    if host_arcsec is None:
+        return []
+    inside = host_arcsec < INSIDE_HOST_ARCSEC
+    both: list[tuple[Literal["outskirts", "inside"], NDArray[np.bool_]]] = [
+        ("outskirts", host_arcsec >= INSIDE_HOST_ARCSEC), ("inside", inside),
+    ]  # fmt: skip
+    return [(host, there) for host, there in both if there.any()]
 
 
 def _measure_block(

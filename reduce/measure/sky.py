@@ -12,6 +12,7 @@ the star; where the observer says so, a surface of second degree through a neare
 from __future__ import annotations
 
 from dataclasses import dataclass
+from typing import Literal
 
 import numpy as np
 from numpy.typing import NDArray
@@ -32,8 +33,16 @@ CLIP_SIGMA = 3.5
 ROUNDS = 5
 HOST_INNER_FWHM, HOST_OUTER_FWHM = 3.0, 5.0
 """On a galaxy, where the sky is bent: nearer, and a surface of second degree instead of a plane."""
+OUTSKIRTS_OUTER_FWHM = 7.0
+"""In a galaxy's outskirts, which bend little, a wider one is as true and less noisy."""
 HOST_MISS = 0.15
 """Fraction of a galaxy's light at the star that this sky still misses, rms (measured on simulated inclined discs)."""
+
+ANNULUS_FWHM = {
+    "none": (INNER_FWHM, OUTER_FWHM),
+    "outskirts": (HOST_INNER_FWHM, OUTSKIRTS_OUTER_FWHM),
+    "inside": (HOST_INNER_FWHM, HOST_OUTER_FWHM),
+}
 
 
 @dataclass(frozen=True, slots=True)
@@ -70,7 +79,7 @@ def annulus_sky(
     y_px: Floats,
     fwhm_px: float,
     *,
-    on_host: bool = False,
+    host: Literal["none", "outskirts", "inside"] = "none",
 ) -> SkyLevels:
     """Sky level, scatter and error at many stars.
 
@@ -82,10 +91,10 @@ def annulus_sky(
         (m, 2) positions of all stars of the image.
     x_px, y_px
         (n,) positions to measure.
-    on_host
-        They lie on a galaxy, whose light bends under the annulus: noisier, but nearer to the light at the star.
+    host
+        Where on a galaxy they lie, whose light bends under the annulus: noisier, but nearer to the light at the star.
     """
-    rows, columns = _annulus(fwhm_px, *((HOST_INNER_FWHM, HOST_OUTER_FWHM) if on_host else (INNER_FWHM, OUTER_FWHM)))
+    rows, columns = _annulus(fwhm_px, *ANNULUS_FWHM[host])
     ny, nx = data_e.shape
     y = np.rint(y_px).astype(int)[:, None] + rows
     x = np.rint(x_px).astype(int)[:, None] + columns
@@ -95,7 +104,7 @@ def annulus_sky(
     clear = inside & without_neighbours(usable, neighbours_xy, fwhm_px).ravel()[pixel]
     good = np.where(clear.sum(axis=1, keepdims=True) >= ENOUGH_PX, clear, good)
     values = np.where(good, data_e.ravel()[pixel], 0.0).astype(float)
-    degree = 2 if on_host else 1
+    degree = 1 if host == "none" else 2
     at_star = _terms(x_px - np.rint(x_px), y_px - np.rint(y_px), degree).T
     return _surfaces(values, good, _terms(columns.astype(float), rows.astype(float), degree), at_star)
 

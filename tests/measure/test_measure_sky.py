@@ -90,7 +90,7 @@ def test_on_a_host_the_light_at_the_star_is_found_where_a_plane_misses_it(place:
     data = np.random.default_rng(8).poisson(300.0 + disc(columns, rows)).astype(np.float32)
     x, y = np.array([150.0 + place[0]]), np.array([150.0 + place[1]])
     centre = np.array([[150.0, 150.0]])
-    found = annulus_sky(data, np.ones(data.shape, bool), centre, x, y, FWHM, on_host=True)
+    found = annulus_sky(data, np.ones(data.shape, bool), centre, x, y, FWHM, host="inside")
     assert found.level_e_px - 300.0 == pytest.approx(disc(x, y), rel=0.3)
 
 
@@ -99,7 +99,9 @@ def test_what_a_sky_on_a_host_still_misses_is_in_its_error() -> None:
     disc = 3000.0 * np.exp(-np.hypot((columns - 150.0) / 11.0, (rows - 150.0) / 8.0))
     data = np.random.default_rng(10).poisson(300.0 + disc).astype(np.float32)
     x, y = np.array([170.0, 40.0, 60.0, 250.0]), np.array([155.0, 40.0, 250.0, 60.0])
-    table = measure_stars(calibrated(data), x, y, FWHM, 1.0, NOBODY, on_host=np.array([True, False, False, False]))
+    table = measure_stars(
+        calibrated(data), x, y, FWHM, 1.0, NOBODY, host_arcsec=np.array([10.0, np.nan, np.nan, np.nan])
+    )
     here = 3000.0 * np.exp(-np.hypot(20.0 / 11.0, 5.0 / 8.0))
     assert abs(table["sky_e_px"][0] - 300.0 - here) < 3.0 * table["sky_err_e_px"][0]
     assert 0.1 * here < table["sky_err_e_px"][0] < 0.25 * here
@@ -112,7 +114,7 @@ def test_error_on_a_host_is_the_scatter_of_the_level() -> None:
     pulls = []
     for _ in range(10):
         data = rng.normal(200.0, 15.0, (500, 500)).astype(np.float32)
-        sky = annulus_sky(data, np.ones(data.shape, bool), NOBODY, x, y, FWHM, on_host=True)
+        sky = annulus_sky(data, np.ones(data.shape, bool), NOBODY, x, y, FWHM, host="inside")
         pulls.append((sky.level_e_px - 200.0) / sky.err_e_px)
     assert np.sqrt(np.mean(np.square(pulls))) == pytest.approx(1.0, abs=0.06)
 
