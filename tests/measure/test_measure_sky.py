@@ -108,6 +108,22 @@ def test_what_a_sky_on_a_host_still_misses_is_in_its_error() -> None:
     assert (table["sky_err_e_px"][1:] < 1.5).all()
 
 
+def test_in_the_outskirts_a_wider_annulus_is_as_true_and_less_noisy() -> None:
+    rows, columns = np.mgrid[0:300, 0:300].astype(float)
+    disc = 3000.0 * np.exp(-np.hypot((columns - 150.0) / 11.0, (rows - 150.0) / 8.0))
+    x, y, found = np.array([198.0]), np.array([172.0]), {}
+    here = 3000.0 * np.exp(-np.hypot(48.0 / 11.0, 22.0 / 8.0))
+    for host in ("inside", "outskirts"):
+        levels = []
+        for seed in range(20):
+            data = np.random.default_rng(seed).poisson(300.0 + disc).astype(np.float32)
+            sky = annulus_sky(data, np.ones(data.shape, bool), NOBODY, x, y, FWHM, host=host)
+            levels.append(sky.level_e_px[0] - 300.0)
+        found[host] = np.mean(levels) - here, np.std(levels)
+    assert abs(found["outskirts"][0]) < 0.1 * here + 3 * found["outskirts"][1] / 20**0.5
+    assert found["outskirts"][1] < 0.8 * found["inside"][1]
+
+
 def test_error_on_a_host_is_the_scatter_of_the_level() -> None:
     rng = np.random.default_rng(9)
     x, y = grid(500, 50, rng)
