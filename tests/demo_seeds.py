@@ -31,9 +31,7 @@ def main() -> int:
     numbers = [word for word in sys.argv[1:] if not word.startswith("-")]
     broken: list[str] = []
     pulls, chi2 = [], defaultdict(list)
-    print(
-        "seed   mu - true  mu_err  fit    kept doubtful dropped   offset B V R I (mmag)        chi2 B V R I     s"
-    )
+    print("seed   mu - true  mu_err  fit    kept doubtful dropped   offset B V R I (mmag)        chi2 B V R I     s")
     for seed in range(1, int(numbers[0] if numbers else 20) + 1):
         with tempfile.TemporaryDirectory() as folder:
             result = one(seed, scatter, Path(folder))

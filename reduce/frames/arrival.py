@@ -1,16 +1,11 @@
-"""Which files of a folder are whole: polling, so that it works on local disks and network file systems alike.
-
-A file is taken when size and modification time were the same on successive looks and the size is what its own headers
-declare; a file packed by gzip declares nothing outside, so it must also have rested for a while. A stuck file is shown
-with its reason.
+"""Which files of a folder are frames, and whether they are whole: by looking, so that it works on local disks and
+network file systems alike. When a whole file may be taken is the campaign's to say (`reduce.campaign.intake`).
 """
 
 from __future__ import annotations
 
 import os
-import time
-from collections.abc import Callable, Iterator
-from dataclasses import dataclass
+from collections.abc import Iterator
 from pathlib import Path
 
 from reduce.frames.extent import CutShort, declared_units
@@ -18,7 +13,6 @@ from reduce.records import FrameError
 
 SUFFIXES = (".fits", ".fit", ".fts")
 PACKINGS = ("", ".fz", ".gz")
-GZIP_REST_S = 10.0
 
 Stamp = tuple[int, int]
 """Size in bytes, modification time in ns."""
@@ -58,65 +52,3 @@ def completeness(path: Path) -> str | None:
     except FrameError:
         return None
     return None
-
-
-@dataclass(slots=True)
-class _Seen:
-    stamp: Stamp
-    since_s: float
-    same: int = 0
-    taken: bool = False
-    lacks: str = ""
-
-
-class Poller:
-    """Gives each whole file once, and again when it changed; files that lie there already count like new ones.
-
-    Parameters
-    ----------
-    folder
-        Watched with everything below it.
-    settle
-        Successive looks with the same stamp that are needed.
-    rest_s
-        Also wait until the file has not changed for so long; for writers that reserve the whole size first and pause.
-    clock
-        Monotonic seconds.
-    """
-
-    def __init__(
-        self, folder: Path, settle: int = 2, rest_s: float = 0.0, clock: Callable[[], float] = time.monotonic
-    ) -> None:
-        self.folder, self.settle, self.rest_s, self.clock = folder, settle, rest_s, clock
-        self._seen: dict[Path, _Seen] = {}
-
-    def poll(self) -> list[Path]:
-        """Look once; files that became whole since the last look, by path."""
-        found, now = scan(self.folder), self.clock()
-        for gone in self._seen.keys() - found.keys():
-            del self._seen[gone]
-        ready = []
-        for path, stamp in found.items():
-            seen = self._seen.get(path)
-            if seen is None or seen.stamp != stamp:
-                self._seen[path] = _Seen(stamp, now)
-                continue
-            seen.same += 1
-            if not seen.taken and self._settled(path, seen, now):
-                seen.lacks = completeness(path) or ""
-                if not seen.lacks:
-                    seen.taken = True
-                    ready.append(path)
-        return ready
-
-    def _settled(self, path: Path, seen: _Seen, now: float) -> bool:
-        rest_s = max(self.rest_s, GZIP_REST_S if path.suffix.lower() == ".gz" else 0.0)
-        return seen.same >= self.settle and now - seen.since_s >= rest_s
-
-    def waiting(self) -> dict[Path, str]:
-        """Files that are not taken yet, and why."""
-        return {
-            path: seen.lacks or "the file is still being written."
-            for path, seen in sorted(self._seen.items())
-            if not seen.taken
-        }

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from abc import abstractmethod
 from typing import TYPE_CHECKING, ClassVar, cast
 
 from rich.text import Text
@@ -30,13 +31,13 @@ class CampaignScreen(Screen[None]):
         yield Static("", id="status")
         yield Footer(compact=True, show_command_palette=False)
 
+    @abstractmethod
     def body(self) -> ComposeResult:
         """Widgets between the lines on top and the status line."""
-        raise NotImplementedError
 
+    @abstractmethod
     def show(self, snapshot: Snapshot, view: TargetView | None) -> None:
         """Draw the campaign."""
-        raise NotImplementedError
 
     @property
     def fadeline(self) -> FadelineApp:

@@ -1,1 +1,0 @@
-"""What to observe next."""
