@@ -138,7 +138,8 @@ def run_app(folder: Path) -> None:
     reducer = ReducerProcess(folder, lambda sentence: app.say(sentence, trouble=True))
     try:
         signal.signal(signal.SIGHUP, lambda *_: app.exit())
-        reducer.keep_running()
+        if os.access(folder, os.W_OK):  # elsewhere the campaign can only be looked at
+            reducer.keep_running()
         app.run()
     finally:
         reducer.stop()

@@ -292,7 +292,7 @@ class Campaign:
             found = stored
         else:
             found = estimate_target(chosen, points)
-        if any(point.star == chosen.name for point in points):
+        if not self.book.readonly and any(point.star == chosen.name for point in points):
             self.book.add_estimate(found, digest, why or self._what_changed(chosen.name))
         return found
 

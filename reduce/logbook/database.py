@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import os
 import sqlite3
 import threading
 from collections.abc import Callable, Iterator, Sequence
@@ -103,6 +104,10 @@ class Database:
         if not create and not path.is_file():
             raise LogbookError(f"{shown} does not exist; start a campaign in that folder first.")
         mode = "ro" if readonly else "rwc" if create else "rw"
+        if readonly and not os.access(path.parent, os.W_OK):
+            # Nobody can write here, and SQLite could not make the files that reading beside a writer needs.
+            mode += "&immutable=1"
+            self.notice = f"{shown} cannot be written here: it is shown as it is, nothing can be decided or noted."
         with self._plainly():
             self._connection = sqlite3.connect(
                 f"{path.resolve().as_uri()}?mode={mode}", uri=True, timeout=BUSY_TIMEOUT_S,

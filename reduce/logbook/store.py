@@ -68,6 +68,7 @@ class Logbook(Log, Arrivals):
     def __init__(self, folder: Path, database: Database, clock: Callable[[], datetime], new_id: IdMaker) -> None:
         super().__init__(database, lambda: iso(clock()), new_id, self.file_names)
         self.folder = folder
+        self.readonly = False
 
     @classmethod
     def create(
@@ -96,9 +97,15 @@ class Logbook(Log, Arrivals):
         random: Callable[[int], bytes] = os.urandom,
         mounts: Callable[[], str] = system_mounts,
     ) -> Self:
-        """The logbook of a folder; an older form is renewed, with a copy of the file first."""
+        """The logbook of a folder; an older form is renewed, with a copy of the file first.
+
+        A folder that cannot be written is opened for reading; `readonly` says so.
+        """
+        readonly = readonly or not os.access(folder, os.W_OK)
         database = Database(folder / FILE_NAME, readonly=readonly, mounts=mounts)
-        return cls(folder, database, clock, IdMaker(clock, random))
+        book = cls(folder, database, clock, IdMaker(clock, random))
+        book.readonly = readonly
+        return book
 
     def __enter__(self) -> Self:
         return self

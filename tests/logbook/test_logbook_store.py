@@ -368,3 +368,16 @@ def test_threads_share_a_logbook(logbook):
     rows = logbook.log()
     assert {row.body for row in rows} == {f"note {n}" for n in range(40)}
     assert len({row.id for row in rows}) == 40
+
+
+def test_a_folder_that_cannot_be_written_is_opened_for_reading(tmp_path, monkeypatch):
+    """As on a read-only disk or in somebody else's folder (tests may run as root, who may write everywhere)."""
+    with Logbook.create(tmp_path / "c") as book:
+        book.note("", "seen", "me")
+    monkeypatch.setattr("os.access", lambda path, mode: False)
+    with Logbook.open(tmp_path / "c") as book:
+        assert book.readonly
+        assert [row.body for row in book.log()] == ["seen"]
+        assert "cannot be written here" in book.notice
+        with pytest.raises(LogbookError):
+            book.note("", "lost", "me")
