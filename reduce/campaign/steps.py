@@ -7,6 +7,8 @@ from collections.abc import Sequence
 from reduce.records import Estimate, Point, Target
 from reduce.views import FrameRow, Step
 
+AGAIN = "to measure again"
+
 
 def _count(n: int, word: str) -> str:
     return f"{n} {word}" if n == 1 else f"{n} {word}s"
@@ -47,7 +49,7 @@ def steps_of(
     calibration = (
         Step("Calibration", "waiting", missing_masters[0])
         if missing_masters
-        else Step("Calibration", "waiting", f"{_count(provisional, 'frame')} to measure again")
+        else Step("Calibration", "waiting", f"{_count(provisional, 'frame')} {AGAIN}")
         if provisional
         else Step("Calibration", "done" if mine else "waiting", "all masters found" if mine else "")
     )
@@ -104,10 +106,9 @@ def _next(
             "Frames",
         )
     if state["Calibration"].state == "waiting":
-        return (
-            f"{state['Calibration'].detail}: take it at dawn, frames are measured again by themselves.",
-            "Frames",
-        )
+        if state["Calibration"].detail.endswith(AGAIN):
+            return f"{state['Calibration'].detail}: that happens by itself.", "Frames"
+        return f"{state['Calibration'].detail}: take it at dawn, frames are measured again by themselves.", "Frames"
     if good and (estimate is None or estimate.mu is None):
         return estimate.verdict if estimate is not None else "No estimate yet.", "Distance"
     if unreadable:
