@@ -52,8 +52,7 @@ FLIPS = (
     _flip("sky without photon noise", "measure/noise.py", "source_e + area_px * sky_e_px", "source_e", PHOTOMETRY),
     _flip("scintillation: airmass to the power 2", "measure/noise.py", "1e-5 * airmass**3", "1e-5 * airmass**2", PHOTOMETRY),
     _flip("scintillation: aperture to the power -4/3", "measure/noise.py", "math.pow(aperture_m, -2.0 / 3.0)", "math.pow(aperture_m, -4.0 / 3.0)", PHOTOMETRY),
-    _flip("digitisation: 1/12 instead of its root", "measure/noise.py", "1.0 / math.sqrt(12.0)", "1.0 / 12.0", PHOTOMETRY),
-    _flip("digitisation of a detector", "frames/detector.py", "DIGITISATION_ADU = ", "DIGITISATION_ADU = 2 * ", "published/test_published_detector"),
+    _flip("digitisation of a detector", "frames/detector.py", "DIGITISATION_ADU = ", "DIGITISATION_ADU = 2 * ", "published/test_published_detector", PHOTOMETRY),
     _flip("sky level known perfectly", "measure/noise.py", "+ (area_px * sky_err_e_px) ** 2", "+ 0.0 * (area_px * sky_err_e_px) ** 2", PHOTOMETRY),
     _flip("measured photons without the sky's", "measure/aperture.py", "photons += np.maximum(sky, 0.0) * square.sum(axis=(1, 2))", "photons += 0.0", APERTURE),
     # ---- raw frame to electrons

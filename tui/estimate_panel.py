@@ -7,6 +7,7 @@ from typing import TYPE_CHECKING
 
 from rich.text import Text
 
+from reduce.candles.distance import modulus_to_mpc, mpc_with_errors
 from tui.band_look import band_colour
 from tui.number_text import number, with_error
 
@@ -37,10 +38,12 @@ def modulus_text(view: TargetView | None) -> Text:
 
 
 def distance_mpc(mu: float, mu_err: float | None) -> str:
-    """Luminosity distance of a modulus, d = 10**(μ/5 - 5) Mpc, with the error to first order."""
-    mpc = 10.0 ** (mu / 5.0 - 5.0)
-    error = None if mu_err is None else 0.2 * 2.302585093 * mpc * mu_err
-    return f"{with_error(mpc, error, 1 if mpc < 1000 else 0)} Mpc"
+    """Luminosity distance of a modulus in words, with the two errors of its 1 σ interval."""
+    if mu_err is None:
+        return f"{number(modulus_to_mpc(mu), 1)} Mpc"
+    mpc, up, down = mpc_with_errors(mu, mu_err)
+    digits = 1 if mpc < 1000 else 0
+    return f"{number(mpc, digits)} +{number(up, digits)} −{number(down, digits)} Mpc"
 
 
 def parameters_text(view: TargetView | None) -> Text:

@@ -8,6 +8,7 @@ from typing import TYPE_CHECKING
 
 import numpy as np
 
+from reduce.almanac.sky import separation_deg
 from reduce.almanac.times import night_of
 from reduce.campaign.steps import steps_of
 from reduce.field.wcs import pixel_to_sky, sky_to_pixel
@@ -182,7 +183,7 @@ class _RowMaker:
     def _offset_arcmin(self, solution: FieldSolution, nx: int, ny: int) -> float | None:
         """Distance of the field's centre from the nearest target."""
         ra, dec = pixel_to_sky(solution, np.array([(nx - 1) / 2]), np.array([(ny - 1) / 2]))
-        distances = [_separation_deg(float(ra[0]), float(dec[0]), t.ra_deg, t.dec_deg) for t in self.targets]
+        distances = [separation_deg(float(ra[0]), float(dec[0]), t.ra_deg, t.dec_deg) for t in self.targets]
         return min(distances) * 60 if distances else None
 
     def _pixels(self, solution: FieldSolution, nx: int, ny: int) -> Mapping[str, tuple[float, float]]:
@@ -193,10 +194,3 @@ class _RowMaker:
         x, y = sky_to_pixel(solution, ra, dec)
         on = (x > -0.5) & (x < nx - 0.5) & (y > -0.5) & (y < ny - 0.5)
         return {names[k]: (round(float(x[k]), 2), round(float(y[k]), 2)) for k in np.flatnonzero(on)}
-
-
-def _separation_deg(ra1: float, dec1: float, ra2: float, dec2: float) -> float:
-    """Great-circle distance by the haversine formula."""
-    a, b, c, d = np.radians([ra1, dec1, ra2, dec2])
-    h = np.sin((d - b) / 2) ** 2 + np.cos(b) * np.cos(d) * np.sin((c - a) / 2) ** 2
-    return float(np.degrees(2 * np.arcsin(min(1.0, np.sqrt(h)))))

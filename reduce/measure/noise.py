@@ -5,13 +5,12 @@ from __future__ import annotations
 import math
 from typing import TypeVar
 
+from reduce.frames.detector import DIGITISATION_ADU
 from reduce.records import Floats
 
 T = TypeVar("T", float, Floats)
 
 MAG_PER_FRACTION = 2.5 / math.log(10.0)
-DIGITISATION_ADU = 1.0 / math.sqrt(12.0)
-"""Rms of rounding to whole units: a uniform distribution one unit wide."""
 MEDIAN_VARIANCE = math.pi / 2.0
 """Variance of a median over that of a mean, Gaussian noise."""
 ATMOSPHERE_M = 8000.0

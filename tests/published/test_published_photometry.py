@@ -13,9 +13,9 @@ from scipy.optimize import minimize_scalar
 from reduce.almanac.airmass import hardie, horizontal, hour_angle_at, kasten_young, pickering, transit_altitude
 from reduce.almanac.sky import moon_phase, moon_position, separation_deg
 from reduce.almanac.times import tt_minus_utc_s
+from reduce.frames.detector import DIGITISATION_ADU
 from reduce.measure.growth import correction_mag, gaussian_enclosed
 from reduce.measure.noise import (
-    DIGITISATION_ADU,
     MAG_PER_FRACTION,
     aperture_variance,
     exposure_for_snr,

@@ -30,7 +30,7 @@ def test_ut_of_mjd() -> None:
 def test_modulus_of_25_is_one_megaparsec() -> None:
     """μ = 25 is 1 Mpc by definition of the modulus, μ = 5 lg(d / 10 pc)."""
     assert distance_mpc(25.0, None) == "1.0 Mpc"
-    assert distance_mpc(35.0, 0.1) == "100.0 ± 4.6 Mpc"
+    assert distance_mpc(35.0, 0.1) == "100.0 +4.7 −4.5 Mpc"
 
 
 def test_limit_is_drawn_three_sigma_above_nothing() -> None:
