@@ -11,7 +11,7 @@ from pathlib import Path
 import numpy as np
 import pytest
 from astropy.io import fits
-from hypothesis import HealthCheck, given, settings
+from hypothesis import HealthCheck, example, given, settings
 from hypothesis import strategies as st
 
 sys.path.insert(0, str(Path(__file__).parents[1] / "frames"))
@@ -169,6 +169,8 @@ def test_damage_anywhere_is_a_sentence_or_a_readable_frame(tmp_path, at, junk):
 
 @settings(max_examples=60, deadline=None, suppress_health_check=[HealthCheck.function_scoped_fixture])
 @given(length=st.integers(0, len(WHOLE) - 1))
+@example(length=1)  # the first letters of a header are no other kind of file
+@example(length=5)
 def test_every_length_but_the_whole_is_cut_short(tmp_path, length):
     path = put(tmp_path / "a.fits", WHOLE[:length])
     data_end = len(WHOLE) - (len(WHOLE) - 2880 - 20000)
