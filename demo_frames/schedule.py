@@ -8,7 +8,7 @@ from typing import Literal
 
 from demo_frames.scenario import REWRITTEN, Fault, Scenario, mjd_of
 
-REPEATS = 2
+REPEATS = 3
 OVERHEAD_S = 25.0
 FLATS_AT, DARKS_AT = time(18, 50), time(19, 30)
 """UTC, evening twilight and after it."""

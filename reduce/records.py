@@ -182,6 +182,8 @@ LADDER_FWHM = (0.6, 0.8, 1.0, 1.25, 1.5, 2.0, 2.5, 3.0, 4.0)
 LADDER_ARCSEC = (3.0, 4.5, 6.0, 9.0)
 """Aperture radii fixed on the sky, for nights whose seeing changes within a frame set."""
 N_RADII = len(LADDER_FWHM) + len(LADDER_ARCSEC)
+PSF_COLUMN = N_RADII
+"""Where fluxes through all radii stand side by side with the PSF flux, it is the last."""
 
 STAR_DTYPE = np.dtype([
     ("role", "u1"),              # 0 field star, 1 target (forced position)
@@ -195,6 +197,10 @@ STAR_DTYPE = np.dtype([
     ("flux_err_e", "f8", (N_RADII,)),   # full CCD noise; scintillation is added by solve
     ("area_px", "f8", (N_RADII,)),
     ("flags", "u4", (N_RADII,)),        # StarFlag bits that hold for each radius
+    ("psf_flux_e", "f8"), ("psf_flux_err_e", "f8"),   # weighted sum under the frame's PSF; error 0: not measured
+    ("psf_chi2", "f4"),                 # reduced, of the pixels that were not rejected
+    ("psf_rejected", "u2"),             # pixels left out within the fit's radius
+    ("psf_flags", "u4"),                # StarFlag bits that hold for the fit
 ])  # fmt: skip
 """One measured star of one frame; the documented, packed form that the logbook stores."""
 
