@@ -23,9 +23,9 @@ BIAS = [f"{FIRST}{n:03}-bias.fits" for n in range(16, 20)]
 DARKS = [f"{FIRST}{n:03}-dark.fits" for n in range(26, 36)]
 FLATS = [f"{FIRST}{n:03}-flatB.fits" for n in range(1, 4)] + [f"{FIRST}{n:03}-flatV.fits" for n in range(6, 9)]
 CALIBRATION = BIAS + DARKS + FLATS
-LIGHTS = [f"{FIRST}036-B.fits", f"{FIRST}037-B.fits", f"{FIRST}038-V.fits", f"{FIRST}039-V.fits",
-          f"{SECOND}006-B.fits", f"{SECOND}008-V.fits"]  # fmt: skip
-OTHER_FIELD = "2025-03-09/20250309-009-V.fits"
+LIGHTS = [f"{FIRST}036-B.fits", f"{FIRST}037-B.fits", f"{FIRST}039-V.fits", f"{FIRST}040-V.fits",
+          f"{SECOND}006-B.fits", f"{SECOND}009-V.fits"]  # fmt: skip
+OTHER_FIELD = "2025-03-09/20250309-013-V.fits"
 LONG_AGO_S = 3600.0
 ENOUGH_S = 60.0
 """A wait that ends by itself on any machine; what is waited for comes much sooner."""

@@ -35,8 +35,8 @@ from reduce.logbook.store import Logbook
 from reduce.plain_text import PlainError
 
 V_FLATS = [path for path in FLATS if "flatV" in path]
-V_LIGHT, V_LIGHT_2 = f"{FIRST}038-V.fits", f"{FIRST}039-V.fits"
-NAME, NAME_2 = "20250226-038-V.fits", "20250226-039-V.fits"
+V_LIGHT, V_LIGHT_2 = f"{FIRST}039-V.fits", f"{FIRST}040-V.fits"
+NAME, NAME_2 = "20250226-039-V.fits", "20250226-040-V.fits"
 
 
 def is_one_sentence(text: str) -> bool:

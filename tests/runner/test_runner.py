@@ -182,7 +182,7 @@ def test_workers_die_with_their_parent(tmp_path, how):
         try:
             wait_for(path.exists)
             parent.send_signal(how)
-            out, err = parent.communicate(timeout=20)
+            out, err = parent.communicate(timeout=60)
             wait_for(lambda: gone(int(path.read_text())))
         finally:
             parent.kill()
