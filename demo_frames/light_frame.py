@@ -8,7 +8,7 @@ import numpy as np
 
 from demo_frames.atmosphere import airmass, altitude_deg, scintillation, sky_mag
 from demo_frames.detector import Detector, Raw
-from demo_frames.optics import Pointing, add_galaxy, add_star
+from demo_frames.optics import Pointing, add_galaxy, add_star, add_streak
 from demo_frames.scenario import Scenario
 from demo_frames.schedule import Exposure
 from demo_frames.star_field import StarField
@@ -56,7 +56,7 @@ def colour(band: str, mags: dict[str, float]) -> float:
 
 def draw_conditions(scene: Scene, exposure: Exposure, rng: np.random.Generator) -> Conditions:
     """Airmass from the clock; haze, seeing and dither by chance."""
-    scenario, band = scene.scenario, scene.scenario.bands[exposure.band or ""]
+    scenario, band = scene.scenario, scene.scenario.bands[exposure.filter_in_beam]
     night, target = scenario.nights[exposure.night], scenario.supernova
     x = airmass(altitude_deg(exposure.mjd_mid, target.ra_deg, target.dec_deg, scenario.site))
     dimming = exposure.fault.dimming_mag if exposure.fault else 0.0
@@ -80,7 +80,7 @@ def draw_conditions(scene: Scene, exposure: Exposure, rng: np.random.Generator) 
 
 def _rate_e(scene: Scene, exposure: Exposure, now: Conditions, mags: dict[str, Floats]) -> Floats:
     """Expected electrons of the whole exposure for stars of these standard magnitudes."""
-    name = exposure.band or ""
+    name = exposure.filter_in_beam
     band = scene.scenario.bands[name]
     blue, red = COLOUR_OF_BAND[name]
     slope = band.colour_term - band.second_order * now.airmass
@@ -96,7 +96,7 @@ def _cloud_mag(now: Conditions, x: Floats, y: Floats) -> Floats:
 
 def render_light(scene: Scene, exposure: Exposure, now: Conditions, rng: np.random.Generator) -> Floats:
     """Expected electrons on a perfect detector, (ny, nx): sky, stars, supernova, host."""
-    scenario, name = scene.scenario, exposure.band or ""
+    scenario, name = scene.scenario, exposure.filter_in_beam
     camera, band = scenario.camera, scenario.bands[name]
     fault = exposure.fault.name if exposure.fault else ""
     clear = replace(now, zero_point=now.zero_point + now.dimming_mag)
@@ -121,6 +121,10 @@ def render_light(scene: Scene, exposure: Exposure, now: Conditions, rng: np.rand
     for star_x, star_y, star_flux in zip(x, y, flux, strict=True):
         for step in steps:
             add_star(image, star_x + step * trail_px, star_y, star_flux / len(steps), now.fwhm_px)
+    if exposure.fault and exposure.fault.streak_e:
+        place = now.pointing.to_pixels(np.array([scenario.supernova.ra_deg]), np.array([scenario.supernova.dec_deg]))
+        x0, y0 = float(place[0][0]), float(place[1][0])
+        add_streak(image, x0, y0, exposure.fault.streak_angle_deg, exposure.fault.streak_e, now.fwhm_px)
     return image
 
 
@@ -144,4 +148,4 @@ def host_position(scenario: Scenario) -> tuple[float, float]:
 def take_light(scene: Scene, exposure: Exposure, now: Conditions, rng: np.random.Generator) -> Raw:
     """Raw frame of one light exposure."""
     light_e = render_light(scene, exposure, now, rng)
-    return scene.detector.expose(light_e, exposure.band or "", exposure.exposure_s, rng)
+    return scene.detector.expose(light_e, exposure.filter_in_beam, exposure.exposure_s, rng)

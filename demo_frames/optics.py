@@ -66,6 +66,14 @@ def add_star(image: Floats, x: float, y: float, flux_e: float, fwhm_px: float) -
     image[y0:y1, x0:x1] += flux_e * (MOFFAT_BETA - 1.0) / (np.pi * core**2) * stamp
 
 
+def add_streak(image: Floats, x: float, y: float, angle_deg: float, peak_e: float, fwhm_px: float) -> None:
+    """Add a satellite's streak through (x, y), as wide as a star's image; the angle runs from +x towards +y."""
+    yy, xx = np.indices(image.shape, dtype=float)
+    angle = np.radians(angle_deg)
+    off = (yy - y) * np.cos(angle) - (xx - x) * np.sin(angle)
+    image += peak_e * np.exp(-4.0 * np.log(2.0) * (off / fwhm_px) ** 2)
+
+
 def add_galaxy(
     image: Floats, x: float, y: float, flux_e: float, scene: GalaxyScene, pointing: Pointing, fwhm_px: float
 ) -> None:

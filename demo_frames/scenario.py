@@ -14,7 +14,7 @@ from reduce.records import ReddeningScale
 Expected = Literal["kept", "doubtful", "dropped", "unreadable"]
 FaultName = Literal[
     "cloud", "trailed", "overexposed", "another field", "truncated", "empty", "text",
-    "compressed", "extension", "wrong object",
+    "satellite", "wheel slip", "compressed", "extension", "wrong object",
 ]  # fmt: skip
 REWRITTEN: tuple[FaultName, ...] = ("compressed", "extension", "wrong object")
 """Faults that change how a good frame is written; all others are frames of their own."""
@@ -159,6 +159,12 @@ class Fault:
     dimming_mag: float = 0.0
     trail_arcsec: float = 0.0
     exposure_s: float | None = None
+    streak_angle_deg: float = 0.0
+    """From +x towards +y, of a satellite that crosses the supernova."""
+    streak_e: float = 0.0
+    """Peak of its streak, electrons a pixel."""
+    seen_through: str | None = None
+    """Filter that was really in the beam."""
 
 
 @dataclass(frozen=True, slots=True)

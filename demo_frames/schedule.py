@@ -31,6 +31,11 @@ class Exposure:
     fault: Fault | None = None
 
     @property
+    def filter_in_beam(self) -> str:
+        """What the light goes through; the header names ``band``."""
+        return (self.fault and self.fault.seen_through) or self.band or ""
+
+    @property
     def mjd_mid(self) -> float:
         """Mid-exposure, MJD UTC."""
         return self.start_mjd + 0.5 * self.exposure_s / SECONDS_PER_DAY

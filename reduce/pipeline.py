@@ -24,9 +24,13 @@ from reduce.frames.calibrate import calibrate
 from reduce.frames.master_sets import ChosenMasters
 from reduce.frames.reader import open_frame
 from reduce.measure.aperture import measure_stars
+from reduce.measure.backdrop import backdrop
 from reduce.measure.growth import growth_curve
 from reduce.measure.noise import scintillation
+from reduce.measure.psf import frame_psf
+from reduce.measure.psf_flux import measure_psf
 from reduce.measure.stamps import pack
+from reduce.measure.trails import find_trails, mark_trails
 from reduce.records import (
     CalibratedImage,
     Choices,
@@ -47,12 +51,13 @@ from reduce.stars.centroid import centroid
 from reduce.stars.detect import detect
 from reduce.stars.width import frame_fwhm
 
-MEASURE_VERSION = 1
+MEASURE_VERSION = 2
 """Raise it when the same pixels would give other numbers: every frame is then measured again beside its old row."""
 
 SAME_SCALE = 0.02
 """Relative; a camera's scale from one frame to another, with focus and temperature."""
 MOST_STARS = 500
+MOST_SATURATED = 20
 LEAST_STAR_SNR = 10.0
 CLOSEST_TO_EDGE_FWHM = 2.0
 
@@ -90,7 +95,7 @@ class Recipe:
         return {
             **camera,
             "version": MEASURE_VERSION,
-            "settings": self.settings.model_dump(exclude={"photometry"}, mode="json"),
+            "settings": self.settings.model_dump(include={"site", "telescope", "camera", "filters"}, mode="json"),
             "masters": self.masters.digests(),
             "targets": [[target.name, target.ra_deg, target.dec_deg, target.host_arcsec] for target in self.targets],
             "astrometric": stars.hexdigest(),
@@ -128,7 +133,12 @@ def measure_frame(path: Path, frame: str, recipe: Recipe) -> Measured:
         info = opened.info
         _require(info)
         adu = opened.read()
-        image = calibrate(adu, info, recipe.masters, recipe.settings)
+        ny = info.ny
+        image = calibrate(
+            adu, info, recipe.masters, recipe.settings,
+            overscan_adu=opened.overscan_rows(0, ny), relative_gain=opened.relative_gain(0, ny),
+        )  # fmt: skip
+        info = replace(info, notes=tuple(dict.fromkeys((*info.notes, *image.notes))))
     except FrameError as error:
         return Measured(frame, digest, "unreadable", str(error), info, seconds=time.perf_counter() - start)
     result = _measure_image(Measured(frame, digest, "measured", "", info), adu, image, info, recipe)
@@ -155,7 +165,10 @@ def _measure_image(blank: Measured, adu: Image, image: CalibratedImage, info: Fr
     if match.solution is None:
         quality = _quality(image, detections, fwhm_px, info, None, None, recipe.settings)
         return replace(blank, outcome="no match", reason=match.reason, quality=quality)
+    behind = backdrop(image.data_e, image.mask, detections, fwhm_px)
+    trails = find_trails(behind, image.data_e, image.mask, detections, fwhm_px)
     table = _measure_stars(adu, image, detections, fwhm_px, match.solution, recipe)
+    mark_trails(table, trails, fwhm_px, match.solution.scale_arcsec)
     growth_mag, growth_err_mag = growth_curve(table)
     ny, nx = image.data_e.shape
     ra_deg, dec_deg = pixel_to_sky(match.solution, np.array([(nx - 1) / 2]), np.array([(ny - 1) / 2]))
@@ -168,7 +181,11 @@ def _measure_image(blank: Measured, adu: Image, image: CalibratedImage, info: Fr
         growth_mag=growth_mag,
         growth_err_mag=growth_err_mag,
         bjd_tdb=float(bjd_tdb(info.mjd_mid, *centre, recipe.settings.site)),
-        quality=_quality(image, detections, fwhm_px, info, centre, table, recipe.settings),
+        quality=replace(
+            _quality(image, detections, fwhm_px, info, centre, table, recipe.settings),
+            n_trails=len(trails),
+            sky_gradient=behind.gradient,
+        ),
         stamps=pack(image, table, fwhm_px, match.solution),
     )
 
@@ -234,6 +251,8 @@ def _measure_stars(
         table["role"][row] = 1
         table["target"][row] = recipe.targets[k].name
         table["ra_deg"][row], table["dec_deg"][row] = target_ra[k], target_dec[k]
+    psf = frame_psf(image, table, neighbours, fwhm_px, solution.scale_arcsec)
+    measure_psf(image, table, neighbours, fwhm_px, psf)
     snr = np.nanmax(table["flux_e"] / table["flux_err_e"], axis=1, initial=0.0)
     kept: NDArray[Any] = table[(table["role"] == 1) | (snr > LEAST_STAR_SNR)]
     return kept
@@ -262,6 +281,7 @@ def _quality(
             telescope.aperture_m, air, info.exposure_s, site.height_m, telescope.scintillation_coefficient
         )
     bright = slice(0, 50)
+    full = detections.saturated
     angles = np.exp(2j * np.radians(detections.position_angle_deg[bright]))
     if table is not None and np.isfinite(table["sky_e_px"]).any():
         sky, sigma = float(np.nanmedian(table["sky_e_px"])), float(np.nanmedian(table["sky_sigma_e_px"]))
@@ -280,6 +300,10 @@ def _quality(
         scintillation=flicker,
         sun_altitude_deg=sun,
         flat_used=image.flat_used,
+        saturated_px=tuple(
+            (round(float(x), 1), round(float(y), 1))
+            for x, y in zip(detections.x_px[full][:MOST_SATURATED], detections.y_px[full][:MOST_SATURATED], strict=True)
+        ),
     )
 
 

@@ -27,11 +27,15 @@ Image = NDArray[np.float32]
 Mask = NDArray[np.uint8]
 
 FrameKind = Literal["light", "bias", "dark", "flat", "unknown"]
+CalibrationStep = Literal["bias", "dark", "flat"]
 FrameState = Literal["kept", "doubtful", "dropped"]
 PointState = Literal["kept", "doubtful", "dropped", "excluded", "limit"]
 StarWord = Literal["used", "spare", "set aside"]
 TargetKind = Literal["type_ia", "cepheid", "rr_lyrae", "other"]
 ReddeningScale = Literal["SF11", "SFD"]
+HostMethod = Literal["annulus", "bent annulus", "mirrored", "reference"]
+"""How the light of a target's host is taken off: with the sky of the annulus about it, of one that follows the
+curved light of a galaxy, with the host's own other side, or with a reference without the target."""
 
 BANDS = ("B", "V", "R", "I", "g", "r", "i")
 """Bands with a standard system: B V R I Landolt (Vega-like), g r i SDSS (AB)."""
@@ -78,8 +82,18 @@ class FrameInfo:
     temperature_c: float | None = None
     extension: int = 0
     """HDU that holds the image."""
+    chip: str = ""
+    """Which detector of a mosaic, where the header says so."""
+    calibrated: tuple[CalibrationStep, ...] = ()
+    """What was done to the pixels before they came here; it is not done again."""
     notes: tuple[str, ...] = ()
     """Sentences on what was guessed or ignored."""
+    window: tuple[int, int] | None = None
+    """Column and row of the detector, 0-based and as binned, where the image begins; None: the header does not say."""
+    overscan: bool = False
+    """The file holds an overscan; it is subtracted line by line before anything else."""
+    pedestal_adu: float | None = None
+    """Constant that a program left in the image when it subtracted the bias: such a frame needs no bias any more."""
 
 
 class PixelFlag(IntFlag):
@@ -111,6 +125,9 @@ class CalibratedImage:
     """Level above which a raw pixel is flagged, in electrons before the flat."""
     relative_flat_error: float = 0.0
     """Photon noise of the master flat per pixel, as a fraction of the signal."""
+    sensitivity: Image | None = None
+    """(ny, nx) flat that the light was divided by: an electron of ``data_e`` has 1/sensitivity electrons² of photon
+    noise. None: 1 everywhere."""
     notes: tuple[str, ...] = ()
 
 
@@ -175,6 +192,10 @@ class StarFlag(IntFlag):
     NO_CENTROID = 32
     """The forced position was used."""
     NON_LINEAR = 64
+    TRAIL = 128
+    """A satellite or an aeroplane crossed it."""
+    RESIDUAL_IMAGE = 256
+    """A saturated star stood here on the frame before."""
 
 
 LADDER_FWHM = (0.6, 0.8, 1.0, 1.25, 1.5, 2.0, 2.5, 3.0, 4.0)
@@ -198,6 +219,7 @@ STAR_DTYPE = np.dtype([
     ("area_px", "f8", (N_RADII,)),
     ("flags", "u4", (N_RADII,)),        # StarFlag bits that hold for each radius
     ("psf_flux_e", "f8"), ("psf_flux_err_e", "f8"),   # weighted sum under the frame's PSF; error 0: not measured
+    ("psf_dx_px", "f4"), ("psf_dy_px", "f4"),         # how far the light lies from x_px, y_px; the flux is that there
     ("psf_chi2", "f4"),                 # reduced, of the pixels that were not rejected
     ("psf_rejected", "u2"),             # pixels left out within the fit's radius
     ("psf_flags", "u4"),                # StarFlag bits that hold for the fit
@@ -223,6 +245,25 @@ class Quality:
     """Expected fractional flux rms (Osborn et al. 2015); 0 when the telescope is not configured."""
     sun_altitude_deg: float | None
     flat_used: bool
+    n_trails: int = 0
+    """Satellites and aeroplanes."""
+    sky_gradient: float | None = None
+    """Change of the sky from one side of the frame to the other, as a fraction of its level."""
+    saturated_px: tuple[tuple[float, float], ...] = ()
+    """Positions of the brightest saturated detections: where the next frame may hold a residual image."""
+
+
+@dataclass(frozen=True, slots=True)
+class HostLight:
+    """How the light of a target's host was taken off one frame."""
+
+    method: HostMethod
+    common_err_e: float = 0.0
+    """Error of the target's flux that all frames of a band share, electrons."""
+    notes: tuple[str, ...] = ()
+    """Sentences on what was noticed."""
+    taken_off: bool = True
+    """False when it could not be done, as the notes say: the frame's own measurement stands."""
 
 
 @dataclass(frozen=True, slots=True)
@@ -250,6 +291,8 @@ class Measured:
     stamps: bytes = b""
     """Compressed stamp pack (measure.stamps)."""
     seconds: float = 0.0
+    host_light: Mapping[str, HostLight] = field(default_factory=dict)
+    """Target → how its row of ``stars`` was freed of its host's light; absent: as measured on the frame."""
 
 
 # ---- field and targets -----------------------------------------------------------------------------------
@@ -288,6 +331,11 @@ class Target:
     host_ra_deg: float | None = None
     host_dec_deg: float | None = None
     reference_folder: str | None = None
+    metallicity_dex: float | None = None
+    """[O/H] or [Fe/H] of a Cepheid, [Fe/H] of an RR Lyrae star, relative to the Sun."""
+    metallicity_err: float | None = None
+    relation: str | None = None
+    """Name of the period–luminosity calibration; None: the default one of the kind."""
 
     @property
     def host_arcsec(self) -> float | None:
@@ -304,13 +352,15 @@ class Choices:
     """What people decided; solve() applies it to stored measurements."""
 
     aperture_fwhm: Mapping[str, float] = field(default_factory=dict)
-    """Band → radius in FWHM, one of LADDER_FWHM; absent: chosen by signal-to-noise."""
+    """Band → radius in FWHM, one of LADDER_FWHM, or 0 for the PSF; absent: chosen by signal-to-noise."""
     stars_set_aside: frozenset[str] = frozenset()
     """Sequence ids."""
     frame_states: Mapping[str, FrameState] = field(default_factory=dict)
     """Frame id → state forced by a person."""
     excluded_points: frozenset[tuple[str, str, str]] = frozenset()
     """(target, night, band)."""
+    host_methods: Mapping[str, HostMethod] = field(default_factory=dict)
+    """Target → method; absent: the best that its reference and its host's position allow."""
     second_order_extinction: Mapping[str, float] = field(default_factory=dict)
     """Band → k″ in mag per airmass per mag of colour, from the settings."""
 
@@ -333,6 +383,7 @@ class FrameZeroPoint:
     slope_diagnostic: float
     """Residual colour slope of this frame alone; a diagnostic, never applied. NaN with too few stars."""
     aperture_fwhm: float
+    """Radius; 0: under the PSF."""
 
 
 @dataclass(frozen=True, slots=True)
@@ -394,14 +445,17 @@ class Point:
     flux_err: float
     state: PointState
     flags: tuple[str, ...] = ()
-    host_method: str = "annulus"
-    """The sky about it, or "bent annulus" where the target lies on a galaxy."""
+    host_method: HostMethod = "annulus"
     zp_group: str = ""
     """camera/band/night."""
     provisional: bool = False
     n_frames: int = 1
     natural_mag: float | None = None
     """Without colour term, in the camera's own system."""
+    source: str = ""
+    """Another observatory that measured it; empty: our own frames."""
+    passbands_known: bool = False
+    """Corrected for the passbands with a supernova's spectrum, and not by colour terms of stars alone."""
 
 
 @dataclass(frozen=True, slots=True)
@@ -439,6 +493,44 @@ class Caution:
 
     name: str
     evidence: str
+    doubts_type: bool = False
+    """It speaks against the kind of object that was assumed, and not only of poor data."""
+
+
+@dataclass(frozen=True, slots=True)
+class Posterior:
+    """The distribution of the fitted parameters, all errors included; μ on the scale of the estimate."""
+
+    parameters: tuple[str, ...]
+    probabilities: tuple[float, ...]
+    quantiles: tuple[tuple[float, ...], ...]
+    """A row of quantiles for each parameter."""
+    correlation: tuple[tuple[float, ...], ...]
+
+
+@dataclass(frozen=True, slots=True)
+class SourceOffset:
+    """Zero-point offset of another observatory's points in one band: what its magnitudes are too faint by."""
+
+    source: str
+    band: str
+    mag: float
+    err: float
+    prior_mag: float
+    """Width of the prior that the offset was fitted with."""
+    n: int
+
+
+@dataclass(frozen=True, slots=True)
+class HubbleModulus:
+    """What the redshift alone says of the modulus; shown beside a distance, never mixed in."""
+
+    mu: float
+    mu_err: float
+    """Of peculiar velocities."""
+    z: float
+    frame: str
+    """"CMB", or "heliocentric" where the position is unknown."""
 
 
 @dataclass(frozen=True, slots=True)
@@ -462,6 +554,77 @@ class FitPoint:
     residual_mag: float
     sigma_mag: float
     rejected: bool
+    source: str = ""
+    """Another observatory; empty: own."""
+
+
+@dataclass(frozen=True, slots=True)
+class PeriodAlias:
+    """One period that the series allows."""
+
+    period_d: float
+    probability: float
+    """Of all periods searched; they sum to 1 with the ones not listed."""
+    note: str = ""
+    """How it comes from the most probable one, e.g. "1/d alias"; empty: the most probable one itself."""
+
+
+@dataclass(frozen=True, slots=True)
+class BandMean:
+    """What a band's folded light curve says."""
+
+    band: str
+    mag: float
+    """Intensity mean, as observed."""
+    err: float
+    """Without the band's zero point."""
+    err_band: float
+    """Shared by all nights."""
+    amplitude_mag: float
+    """Peak to peak."""
+    n: int
+    order: int
+    """Harmonics of the Fourier fit."""
+    largest_gap: float
+    """Of phase."""
+    covered: bool
+    """False: too few points or too large a gap, so that the other bands and the common shape had to help."""
+    r21: float | None = None
+    phi21: float | None = None
+    """φ2 − 2 φ1 of a cosine series, 0 to 2π."""
+
+
+@dataclass(frozen=True, slots=True)
+class ApparentModulus:
+    """Distance modulus from one band, or from the reddening-free index, by the named relation."""
+
+    band: str
+    """A band letter, or "W" for the Wesenheit index of V and I."""
+    mag: float
+    err: float
+    relation: str
+    note: str = ""
+
+
+@dataclass(frozen=True, slots=True)
+class Pulsation:
+    """What a Cepheid's or RR Lyrae star's light curve says beside the distance."""
+
+    period_d: float
+    period_err_d: float
+    mode: str
+    """``fundamental``, "first overtone", "RRab", "RRc"; with "assumed" where the light curve cannot tell."""
+    epoch_bjd: float
+    """Time of maximum light, near the middle of the series; phase 0."""
+    coverage: float
+    """Fraction of the period that has a point within 0.05, in the best covered band."""
+    aliases: tuple[PeriodAlias, ...] = ()
+    means: tuple[BandMean, ...] = ()
+    moduli: tuple[ApparentModulus, ...] = ()
+    relation: str = ""
+    """Name of the calibration μ stands on."""
+    provenance: str = ""
+    """Its publication, and how far its numbers were checked."""
 
 
 @dataclass(frozen=True, slots=True)
@@ -492,6 +655,15 @@ class Estimate:
     points: tuple[FitPoint, ...] = ()
     peak_mag: Mapping[str, float] = field(default_factory=dict)
     """Band → fitted apparent magnitude at B maximum, as observed (reddened)."""
+    pulsation: Pulsation | None = None
+    """Of Cepheids and RR Lyrae stars."""
+    posterior: Posterior | None = None
+    priors: tuple[str, ...] = ()
+    """A sentence for each prior: what it is, or that it is switched off."""
+    offsets: tuple[SourceOffset, ...] = ()
+    hubble: HubbleModulus | None = None
+    distance_mpc: tuple[float, float, float] | None = None
+    """Luminosity distance with its upper and its lower error, the 1 σ interval of μ."""
 
 
 @dataclass(frozen=True, slots=True)
@@ -513,6 +685,13 @@ class LightCurve:
     flux: Floats
     flux_err: Floats
     night: NDArray[np.str_]
+    bjd_tdb: Floats | None = None
+    """Barycentric times, NaN where unknown; phases of short periods need them: the Earth's orbit moves UTC by 8 min."""
+    source: NDArray[np.str_] | None = None
+    """Other observatories by name, empty for own points; each has zero points of its own. None: all are own."""
+    by_colour_terms: NDArray[np.bool_] | None = None
+    """Brought to the standard system by colour terms of stars alone, passbands unknown: a supernova's spectrum then
+    leaves an error in every band. None: no point was."""
 
     def __len__(self) -> int:
         return len(self.mjd)

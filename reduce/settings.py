@@ -53,17 +53,68 @@ class Camera(_Table):
     """Arcsec per unbinned pixel."""
     dark_e_per_s: Annotated[float, Field(ge=0)] | None = None
     """Dark current at working temperature, for frames without a master dark."""
+    overrides_header: bool = False
+    """Gain, read noise and saturation written here win over what headers state: headers can be wrong."""
+    fringe_bands: tuple[Literal["B", "V", "R", "I", "g", "r", "i"], ...] = ()
+    """Bands in which this (thinned) detector shows fringes; they are taken off with a pattern made of night skies."""
 
 
 class Photometry(_Table):
     """Choices of the solution that belong to an observatory."""
 
     aperture_fwhm: dict[str, float] = {}
-    """Band → aperture radius in FWHM; absent: chosen by signal-to-noise."""
+    """Band → aperture radius in FWHM, 0 for the PSF; absent: chosen by signal-to-noise."""
     second_order_extinction: dict[str, float] = {"B": -0.03}
     """Band → k″, mag per airmass per mag of colour; −0.03 in B is common practice."""
     colour_terms: dict[str, float] = {}
     """Band → colour term to adopt when the comparison stars cannot give one."""
+
+
+class Planning(_Table):
+    """Limits and costs that plans keep to."""
+
+    lowest_altitude_deg: Annotated[float, Field(ge=5, lt=90)] = 30.0
+    """Airmass 2, common practice."""
+    sun_altitude_deg: Annotated[float, Field(ge=-18, le=-6)] = -12.0
+    """Frames of targets are planned while the Sun is lower; nautical twilight, common practice."""
+    moon_separation_deg: Annotated[float, Field(ge=0, le=180)] = 30.0
+    """Nearer than this to the Moon no frame is planned (common practice)."""
+    slew_s: Annotated[float, Field(ge=0, le=3600)] = 90.0
+    """Slewing, centring and settling, once a target and night."""
+    filter_s: Annotated[float, Field(ge=0, le=600)] = 15.0
+    """Changing the filter, once a band."""
+    readout_s: Annotated[float, Field(ge=0, le=600)] = 10.0
+    """Reading out and storing, once a frame."""
+    longest_exposure_s: Annotated[float, Field(gt=0, le=7200)] = 300.0
+    """Of one frame."""
+    clear_chance: Annotated[float, Field(gt=0, le=1)] = 0.6
+    """That a coming night can be used (common practice; the site knows better)."""
+    snr_goal: dict[Literal["B", "V", "R", "I", "g", "r", "i"], Annotated[float, Field(gt=0, le=10000)]] = {}
+    """Band → signal-to-noise that a night shall reach on a target; absent: 50, 0.02 mag (common practice)."""
+    cadence_d: Annotated[float, Field(gt=0, le=100)] = 2.0
+    """A target is due when its last point is older."""
+    mu_err_goal: Annotated[float, Field(gt=0, lt=1)] = 0.13
+    """Error of a type Ia modulus (mag) that is good enough: what a night could add beyond it is not worth its time."""
+
+
+class Frames(_Table):
+    """What kind a file is, where its header does not say: patterns of file names ("*_flat_*"), or of folders and file
+    names ("flats/*").
+    """
+
+    light: tuple[str, ...] = ()
+    bias: tuple[str, ...] = ()
+    dark: tuple[str, ...] = ()
+    flat: tuple[str, ...] = ()
+
+
+class Distance(_Table):
+    """The absolute scale of type Ia distances; without either, that of the model."""
+
+    h0: Annotated[float, Field(ge=20, le=200)] | None = None
+    """km/s/Mpc."""
+    m_b: Annotated[float, Field(ge=-21, le=-17)] | None = None
+    """A calibrated M_B at maximum for Δm15 = 1.1 without host dust; it goes before h0."""
 
 
 class Settings(_Table):
@@ -74,7 +125,10 @@ class Settings(_Table):
     camera: Camera = Camera()
     filters: dict[str, Literal["B", "V", "R", "I", "g", "r", "i"]] = {}
     """Filter name in headers → band letter, before the built-in table."""
+    frames: Frames = Frames()
     photometry: Photometry = Photometry()
+    distance: Distance = Distance()
+    planning: Planning = Planning()
 
 
 def _known_keys(location: tuple[int | str, ...]) -> list[str]:
@@ -111,7 +165,8 @@ def parse_settings(text: str, source: str = "observatory.toml") -> Settings:
             near = get_close_matches(str(first["loc"][-1]), _known_keys(first["loc"]), 1, 0.3)
             hint = f"; did you mean {near[0]}?" if near else "; remove it."
             raise SettingsError(f"{source} has an unknown key {key}{hint}") from error
-        raise SettingsError(f"{source}, key {key}: {first['msg'].lower()} (found {first['input']!r}).") from error
+        wants = first["msg"][0].lower() + first["msg"][1:]
+        raise SettingsError(f"{source}, key {key}: {wants} (found {first['input']!r}).") from error
 
 
 def read_settings(path: Path) -> Settings:

@@ -7,6 +7,7 @@ from dataclasses import dataclass, replace
 
 import numpy as np
 
+from reduce.field.wcs import sky_to_pixel
 from reduce.records import (
     COLOUR_OF_BAND,
     LADDER_FWHM,
@@ -75,6 +76,11 @@ class Shot:
     """Stars off the frame."""
     flat_scatter_mag: float = 0.0
     noise: bool = True
+    rotation_deg: float = 0.0
+    plane_mag: tuple[float, float] = (0.0, 0.0)
+    """How much fainter stars are half a frame to the right and half a frame up."""
+    seen_through: str | None = None
+    """Filter that was really there."""
 
 
 def true_zero_point(shot: Shot) -> float:
@@ -84,7 +90,7 @@ def true_zero_point(shot: Shot) -> float:
 
 def measure(shot: Shot, field: Field, rng: np.random.Generator, targets: Iterable[Target] = (TARGET,)) -> Measured:
     """What a perfect measurement of the exposure gives, with photon, sky and read noise."""
-    band, sequence, targets = shot.band, field.sequence, list(targets)
+    band, sequence, targets = shot.seen_through or shot.band, field.sequence, list(targets)
     blue, red = COLOUR_OF_BAND[band]
     n = len(sequence)
     mag = np.concatenate([field.true_mag[band], [shot.target_mag[band]] * len(targets)])
@@ -94,13 +100,20 @@ def measure(shot: Shot, field: Field, rng: np.random.Generator, targets: Iterabl
             [shot.target_mag[blue] - shot.target_mag[red]] * len(targets),
         ]
     )
+    shot, labelled = replace(shot, band=band), shot.band
     coefficient = TERMS[band] - SECOND_ORDER.get(band, 0.0) * shot.airmass
     instrumental = mag - true_zero_point(shot) - coefficient * colour
     instrumental = instrumental + shot.flat_scatter_mag * rng.normal(size=len(mag))
     instrumental = instrumental + shot.patchy_mag * rng.uniform(size=len(mag))
+    scale, turn = 1.0 / 3600.0, np.radians(shot.rotation_deg)
+    cd = ((-scale * np.cos(turn), scale * np.sin(turn)), (scale * np.sin(turn), scale * np.cos(turn)))
+    solution = FieldSolution(CENTRE, (255.5, 255.5), cd, n, 0.1)
     rows = np.zeros(len(mag), STAR_DTYPE)
     rows["ra_deg"] = np.concatenate([sequence.ra_deg, [t.ra_deg for t in targets]])
     rows["dec_deg"] = np.concatenate([sequence.dec_deg, [t.dec_deg for t in targets]])
+    rows["x_px"], rows["y_px"] = sky_to_pixel(solution, rows["ra_deg"], rows["dec_deg"])
+    place = np.stack([rows["x_px"] - 255.5, rows["y_px"] - 255.5], axis=-1) / 256.0
+    instrumental = instrumental + place @ np.array(shot.plane_mag)
     rows["role"][n:] = 1
     rows["target"][n:] = [t.name for t in targets]
     radius = np.array([*LADDER_FWHM, *np.full(N_RADII - len(LADDER_FWHM), 2.0)]) * FWHM_PX
@@ -115,7 +128,7 @@ def measure(shot: Shot, field: Field, rng: np.random.Generator, targets: Iterabl
     rows["flux_err_e"] = np.sqrt(np.maximum(flux, 0) + background)
     there = np.array([k not in shot.lost for k in range(len(mag))])
     info = FrameInfo(
-        kind="light", band=band, filter_name=band, object_name="", camera=shot.camera, mjd_mid=shot.mjd,
+        kind="light", band=labelled, filter_name=labelled, object_name="", camera=shot.camera, mjd_mid=shot.mjd,
         exposure_s=shot.exposure_s, ra_deg=None, dec_deg=None, scale_arcsec=1.0, gain_e_per_adu=1.5,
         read_noise_e=8.0, saturation_adu=65000.0, nx=512, ny=512,
     )  # fmt: skip
@@ -124,8 +137,6 @@ def measure(shot: Shot, field: Field, rng: np.random.Generator, targets: Iterabl
         n_detected=n, n_saturated=0, exposure_s=shot.exposure_s, airmass=shot.airmass, scintillation=0.0,
         sun_altitude_deg=-40.0, flat_used=True,
     )  # fmt: skip
-    scale = 1.0 / 3600.0
-    solution = FieldSolution(CENTRE, (255.5, 255.5), ((-scale, 0.0), (0.0, scale)), n, 0.1)
     return Measured(
         shot.name, "recipe", "measured", "", info, None, quality, solution, rows[there]
     )  # fmt: skip

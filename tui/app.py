@@ -16,14 +16,18 @@ from textual.theme import Theme
 
 from tui.actions import SCREENS, app_bindings
 from tui.messages import Said, SnapshotFetched, trouble_sentence
+from tui.preferences import Preferences
 from tui.terminal import few_colours, plain_characters
 from tui.widgets.delta import DeltaDisplay
 
 if TYPE_CHECKING:
     from reduce.views import Snapshot, TargetView
     from tui.desk import Desk
+    from tui.widgets.preview import Look
 
-POLL_S = 1.0
+POLL_S = 0.15
+SLOW_POLL_S = 1.5
+"""Over a slow link: pictures that follow each other closely are drawn once."""
 
 _log = logging.getLogger("fadeline.app")
 _log.addHandler(logging.NullHandler())  # a traceback goes to the log file or nowhere, never on the screen
@@ -65,17 +69,23 @@ class FadelineApp(DeltaDisplay):
     MODES: ClassVar = {mode: _factory(mode) for mode in SCREENS}
     DEFAULT_MODE = "tonight"
     HORIZONTAL_BREAKPOINTS = [(0, "-narrow"), (120, "-wide")]  # noqa: RUF012 - declared so by textual
+    VERTICAL_BREAKPOINTS = [(0, "-short"), (24, "-high")]  # noqa: RUF012 - declared so by textual
     COMMAND_PALETTE_BINDING = "ctrl+p"
 
-    def __init__(self, desk: Desk) -> None:
+    def __init__(self, desk: Desk, preferences: Preferences | None = None, slow_link: bool = False) -> None:
         super().__init__()
         self.desk = desk
+        self.preferences = preferences or Preferences()
+        self.set_keymap(self.preferences.keymap)
+        self.slow_link = slow_link
         self.snapshot: Snapshot | None = None
         self.target_name = ""
         self.plain = plain_characters(os.environ)
-        self.plain_pictures = few_colours(os.environ)
+        self.few_colours = few_colours(os.environ)
+        self.dots = self.few_colours
         self.safety_shown = True
         self.sentence = Said("")
+        self._alerts_seen: set[str] | None = None
         self._nudge = asyncio.Event()
         self._writing = asyncio.Lock()
         self.register_theme(DARK)
@@ -90,7 +100,7 @@ class FadelineApp(DeltaDisplay):
     # ---- the snapshot ------------------------------------------------------------------------------------
 
     async def _follow(self) -> None:
-        """Look at the stamp each second, or at once after a nudge; fetch a snapshot when it moved."""
+        """Look at the stamp again and again, or at once after a nudge; fetch a snapshot when it moved."""
         seen: int | None = None
         trouble = ""
         while True:
@@ -108,7 +118,7 @@ class FadelineApp(DeltaDisplay):
                     _log.error("following the logbook", exc_info=error)
                     self.say(trouble, trouble=True)
             try:
-                await asyncio.wait_for(self._nudge.wait(), POLL_S)
+                await asyncio.wait_for(self._nudge.wait(), SLOW_POLL_S if self.slow_link else POLL_S)
             except TimeoutError:
                 continue
 
@@ -120,12 +130,38 @@ class FadelineApp(DeltaDisplay):
         if self.target_name not in names:
             self.target_name = names[0] if names else ""
         self.redraw_screen()
+        self._tell_alerts(message.snapshot)
+
+    def _tell_alerts(self, snapshot: Snapshot) -> None:
+        """Say what is new of this night, and ring or flash as wished; what was there at the start is old."""
+        new = [alert for alert in snapshot.alerts if alert.id not in (self._alerts_seen or ())]
+        first, self._alerts_seen = self._alerts_seen is None, {alert.id for alert in snapshot.alerts}
+        if first or not new:
+            return
+        more = f" (and {len(new) - 1} more)" if len(new) > 1 else ""
+        self.post_message(Said(new[-1].sentence + more, flash=self.preferences.alert == "flash"))
+        if self.preferences.alert == "bell":
+            self.bell()
 
     @property
     def view(self) -> TargetView | None:
         """The chosen target."""
         targets = self.snapshot.targets if self.snapshot else ()
         return next((v for v in targets if v.target.name == self.target_name), None)
+
+    @property
+    def picture_look(self) -> Look:
+        """How frames are drawn."""
+        return "plain" if self.plain else "braille" if self.dots or self.slow_link else "blocks"
+
+    def change_picture_look(self) -> None:
+        """Draw frames in shades of grey, or in dots."""
+        if self.plain or self.few_colours:
+            why = "plain characters are drawn" if self.plain else "this terminal has too few colours for shades of grey"
+            self.say(f"Nothing to change: {why}.")
+            return
+        self.dots = not self.dots
+        self.say("Pictures are drawn in dots." if self.dots else "Pictures are drawn in shades of grey.")
 
     def redraw_screen(self) -> None:
         """Draw the campaign on the present screen, also when a window lies above it."""
@@ -164,6 +200,10 @@ class FadelineApp(DeltaDisplay):
             except Exception as error:  # a refused decision is a sentence
                 _log.error("writing to the logbook", exc_info=error)
                 self.say(trouble_sentence(error), trouble=True)
+        self._nudge.set()
+
+    def look_again(self) -> None:
+        """Fetch a new picture at once when something was written."""
         self._nudge.set()
 
     def decide(self, subject: str, aspect: str, value: str, words: str) -> None:
@@ -211,6 +251,20 @@ class FadelineApp(DeltaDisplay):
         self.say("Drawing with plain characters." if self.plain else "Drawing finely.")
         self.redraw_screen()
 
+    def action_slow_link(self) -> None:
+        """Send less, or as usual again."""
+        self.slow_link = not self.slow_link
+        self.say(
+            "Slow link: fewer redraws, and pictures only when asked for." if self.slow_link else "Drawing as usual."
+        )
+        self.redraw_screen()
+
+    def action_guide(self) -> None:
+        """Show the observer's guide."""
+        from tui.screens.help import GuideScreen
+
+        self.push_screen(GuideScreen())
+
     def action_redraw(self) -> None:
         """Write every cell again."""
         self.forget_frame()
@@ -220,7 +274,8 @@ class FadelineApp(DeltaDisplay):
         """Show the help of this screen."""
         from tui.screens.help import HelpScreen
 
-        self.push_screen(HelpScreen(self.current_mode))
+        mode = getattr(self.screen, "MODE", "") or self.current_mode
+        self.push_screen(HelpScreen(mode, self.preferences))
 
     def action_command_palette(self) -> None:
         """Open the palette of all actions."""

@@ -2,66 +2,20 @@
 
 from __future__ import annotations
 
-import json
 import sys
 import time
-from collections.abc import Callable
-from functools import wraps
+from collections.abc import Callable, Iterable
 from pathlib import Path
-from typing import TYPE_CHECKING, Any, Literal, ParamSpec
+from typing import Literal
 
 import click
 
-if TYPE_CHECKING:
-    from reduce.campaign.door import Campaign
-    from reduce.records import Target
-
-P = ParamSpec("P")
-
-EXIT_UNREADABLE = 1
-EXIT_USAGE = 2
-FOLDER = click.Path(path_type=Path, file_okay=False)
-FILE = click.Path(path_type=Path)
-
-
-class OneSentence(click.ClickException):
-    """A refusal the user can act on; exit code 2."""
-
-    exit_code = EXIT_USAGE
-
-    def show(self, file: Any = None) -> None:
-        """Print the sentence alone, without a usage block."""
-        click.echo(f"fadeline: {self.format_message()}", err=True)
-
-
-def plainly(command: Callable[P, None]) -> Callable[P, None]:
-    """Turn the project's own errors into one sentence; leave the traceback in the log file."""
-
-    @wraps(command)
-    def run(*args: P.args, **kwargs: P.kwargs) -> None:
-        from reduce.plain_text import PlainError
-
-        try:
-            command(*args, **kwargs)
-        except BrokenPipeError:
-            sys.stderr.close()  # the reader of our output has gone: nothing is wrong
-        except PlainError as error:
-            raise OneSentence(str(error)) from error
-        except OSError as error:
-            raise OneSentence(f"{error.filename or 'A file'}: {(error.strerror or str(error)).lower()}.") from error
-
-    return run
-
-
-def _print_json(value: Any) -> None:
-    text = json.dumps(value, allow_nan=False, ensure_ascii=False)
-    click.echo(text.encode("utf-8", "replace").decode())  # a file name need not be text; JSON must be
-
-
-def _campaign(folder: Path) -> Campaign:
-    from reduce.campaign.door import Campaign
-
-    return Campaign.open(folder)
+from tui.combine_command import combine
+from tui.command_line import EXIT_UNREADABLE, FILE, FOLDER, open_campaign, plainly, print_json, progress
+from tui.import_command import import_points
+from tui.plan_command import advise, plan
+from tui.sequence_command import sequence, standards
+from tui.target_command import target as target_command
 
 
 def _version(context: click.Context, _parameter: click.Parameter, wanted: bool) -> None:
@@ -100,12 +54,6 @@ def _numbers(text: str, names: str, option: str) -> list[float]:
     return values
 
 
-def _target(text: str, ebv_mw: str | None, host: str | None, reference: Path | None) -> Target:
-    from reduce.campaign.targets import parse_target
-
-    return parse_target(text, ebv_mw, host, reference)
-
-
 @main.command()
 @click.argument("folder", metavar="DIR", type=FOLDER)
 @click.option("--frames", required=True, type=FOLDER, help="Folder where frames lie or land; searched recursively.")
@@ -136,10 +84,11 @@ def new(
     from dataclasses import replace
 
     from reduce.campaign.door import Campaign
+    from reduce.campaign.targets import parse_target
     from reduce.plain_text import clean_text
 
     parsed = [
-        _target(text, ebv_mw if first else None, host if first else None, reference if first else None)
+        parse_target(text, ebv_mw if first else None, host if first else None, reference if first else None)
         for first, text in zip([True] + [False] * len(targets), targets, strict=False)
     ]
     parsed[0] = replace(parsed[0], spectroscopic_type=clean_text(spectrum, 20) if spectrum else None)
@@ -170,18 +119,18 @@ def open_app(folder: Path) -> None:
 @plainly
 def reduce(folder: Path, follow: bool, workers: int | None, as_json: bool, until_input_ends: bool) -> None:
     """Reduce what has landed: calibrate, match, measure, solve, estimate."""
-    campaign = _campaign(folder)
+    campaign = open_campaign(folder)
     unreadable = False
     stop = _stop_wish(until_input_ends)
-    for report in campaign.reduce(follow=follow, workers=workers, progress=_progress, should_stop=stop):
+    for report in campaign.reduce(follow=follow, workers=workers, progress=progress, should_stop=stop):
         unreadable = report.summary["unreadable"] > 0
         for row in report.rows:
             if as_json:
-                _print_json(row)
+                print_json(row)
             elif row["state"] != "kept":
                 click.echo(f"{row['file']}: {row['state'] or row['outcome']}: {row['reason']}")
         if as_json:
-            _print_json(report.summary)
+            print_json(report.summary)
         else:
             click.echo(report.sentence)
     if unreadable:
@@ -211,26 +160,6 @@ def _stop_wish(until_input_ends: bool) -> Callable[[], bool]:
     return asked.is_set
 
 
-class _Progress:
-    """One line on stderr, overwritten in place; where that is no terminal, a line every few seconds."""
-
-    every_s = 5.0
-
-    def __init__(self) -> None:
-        self._last = 0.0
-
-    def __call__(self, text: str) -> None:
-        now = time.monotonic()
-        if sys.stderr.isatty():
-            click.echo(f"\r\x1b[K{text}", err=True, nl=False)
-        elif text and now - self._last >= self.every_s:
-            self._last = now
-            click.echo(text, err=True)
-
-
-_progress = _Progress()
-
-
 @main.command()
 @click.argument("folder", metavar="DIR", type=FOLDER)
 @click.argument("target", required=False)
@@ -242,10 +171,10 @@ def curve(folder: Path, target: str | None, per_frame: bool, all_stars: bool, as
     """Print the calibrated light curve of TARGET."""
     from reduce.exchange.point_json import point_to_json
 
-    campaign = _campaign(folder)
+    campaign = open_campaign(folder)
     points = campaign.curve(campaign.target(target).name, per_frame=per_frame, all_stars=all_stars)
     if as_json:
-        _print_json([point_to_json(point) for point in points])
+        print_json([point_to_json(point) for point in points])
         return
     click.echo("night       band  MJD (UTC)      mag      err     err_night err_band state  frames")
     for p in points:
@@ -260,30 +189,73 @@ def curve(folder: Path, target: str | None, per_frame: bool, all_stars: bool, as
 @click.argument("folder", metavar="[DIR]", type=FOLDER, required=False)
 @click.argument("target", required=False)
 @click.option(
-    "--light-curve", type=FILE, help="Fit a CSV file instead: name,mjd,band,mag,err,z,ebv_mw[,flux,flux_err]."
+    "--light-curve",
+    type=FILE,
+    help="Fit a CSV file instead: name,mjd,band,mag,err,z,ebv_mw[,kind,flux,flux_err,err_band,source,passbands].",
 )
+@click.option("--scale-h0", type=click.FloatRange(20, 200), metavar="H0", help="Scale of type Ia distances, km/s/Mpc.")
+@click.option("--scale-mb", type=click.FloatRange(-21, -17), metavar="M_B",
+              help="The same by a calibrated M_B at maximum (Δm15 = 1.1, no host dust).")  # fmt: skip
+@click.option("--without-prior", multiple=True, metavar="NAME",
+              help="Do without what is assumed: dust, dm15, grey or offsets. Repeatable.")  # fmt: skip
+@click.option("--samples", type=click.IntRange(1, 1_000_000), metavar="N",
+              help="Print N draws from the posterior as CSV.")  # fmt: skip
 @click.option("--json", "as_json", is_flag=True, help="One JSON object a target, on a line.")
 @plainly
-def distance(folder: Path | None, target: str | None, light_curve: Path | None, as_json: bool) -> None:
+def distance(
+    folder: Path | None,
+    target: str | None,
+    light_curve: Path | None,
+    scale_h0: float | None,
+    scale_mb: float | None,
+    without_prior: tuple[str, ...],
+    samples: int | None,
+    as_json: bool,
+) -> None:
     """Print the distance modulus, how sure it is and why."""
-    from reduce.campaign.estimates import estimate_file
+    from reduce.campaign.estimates import assumptions_of, estimate_file, sample_rows
+    from reduce.candles.assumptions import PRIORS
+    from reduce.exchange.light_curve_file import read_light_curves
     from reduce.exchange.point_json import estimate_to_json
 
+    if scale_h0 is not None and scale_mb is not None:
+        raise click.UsageError("Give either --scale-h0 or --scale-mb, not both.")
+    if unknown := set(without_prior) - set(PRIORS):
+        raise click.BadParameter(f"{min(unknown)!r} is none of {', '.join(PRIORS)}.", param_hint="--without-prior")
     if light_curve is not None:
         if folder is not None:
             raise click.UsageError("Give either a campaign folder or --light-curve, not both.")
-        estimates = estimate_file(light_curve)
+        assumptions = assumptions_of(None, scale_h0, scale_mb, without_prior)
+        if samples:
+            _print_samples(sample_rows(read_light_curves(light_curve), samples, assumptions))
+            return
+        estimates = estimate_file(light_curve, assumptions)
     else:
-        campaign = _campaign(folder or Path())
+        campaign = open_campaign(folder or Path())
+        assumptions = assumptions_of(campaign.settings, scale_h0, scale_mb, without_prior)
         names = [campaign.target(target).name] if target else [t.name for t in campaign.targets()]
-        estimates = (campaign.estimate(name) for name in names)
+        if samples:
+            _print_samples(sample_rows([campaign.light_curve(name) for name in names], samples, assumptions))
+            return
+        estimates = (campaign.estimate(name, assumptions=assumptions) for name in names)
     for estimate in estimates:
         if as_json:
-            _print_json(estimate_to_json(estimate))
+            print_json(estimate_to_json(estimate))
         else:
             from tui.estimate_text import estimate_lines
 
             click.echo("\n".join(estimate_lines(estimate)))
+
+
+def _print_samples(rows: Iterable[tuple[str, tuple[float, ...] | None]]) -> None:
+    """CSV of draws; a target that has no distance yet is named on stderr."""
+    click.echo("name,mu,e_host,t_max,dm15")
+    for name, row in rows:
+        if row is None:
+            click.echo(f"{name}: cannot tell yet, so there is nothing to draw from.", err=True)
+        else:
+            quoted = '"' + name.replace('"', '""') + '"' if set(name) & set(',"') else name
+            click.echo(f"{quoted},{row[0]:.5f},{row[1]:.5f},{row[2]:.5f},{row[3]:.5f}")
 
 
 @main.command()
@@ -293,7 +265,7 @@ def distance(folder: Path | None, target: str | None, light_curve: Path | None, 
 @plainly
 def note(folder: Path, words: tuple[str, ...], target_name: str | None) -> None:
     """Write a note into the observing log."""
-    campaign = _campaign(folder)
+    campaign = open_campaign(folder)
     row = campaign.note(campaign.target(target_name).name, " ".join(words))
     click.echo(f"{row.at}  {row.target}  {row.body}")
 
@@ -308,11 +280,11 @@ def log(folder: Path, search: str | None, target_name: str | None, as_json: bool
     """Print the observing log: notes, decisions and events, oldest first."""
     from dataclasses import asdict
 
-    campaign = _campaign(folder)
+    campaign = open_campaign(folder)
     name = campaign.target(target_name).name if target_name else None
     for row in campaign.log(search=search, target=name):
         if as_json:
-            _print_json(asdict(row))
+            print_json(asdict(row))
         else:
             click.echo(f"{row.at}  {row.kind:8}  {row.target:12}  {row.who:10}  {row.body}")
 
@@ -333,7 +305,7 @@ def export(
     folder: Path, target: str | None, style: Literal["ecsv", "csv"] | None, output: Path | None, per_frame: bool
 ) -> None:
     """Write the calibrated light curve as an ECSV table or CSV."""
-    campaign = _campaign(folder)
+    campaign = open_campaign(folder)
     if output == Path("-"):
         output = None
     by_name: Literal["ecsv", "csv"] = "csv" if output is not None and output.suffix.lower() == ".csv" else "ecsv"
@@ -350,17 +322,17 @@ def export(
 @plainly
 def inspect(files: tuple[Path, ...], as_json: bool, folder: Path | None) -> None:
     """Say what each file is and what was understood of it."""
-    from reduce.frames.reader import inspect_file
+    from reduce.frames.inspection import inspect_file
     from reduce.settings import Settings, read_settings
     from tui.inspect_text import inspect_lines
 
     settings = read_settings(folder / "observatory.toml") if folder else Settings()
     unusable = 0
     for path in files:
-        found = inspect_file(path, settings)
+        found = inspect_file(path, settings, time.time())
         unusable += not found["usable"]
         if as_json:
-            _print_json(found)
+            print_json(found)
         else:
             click.echo("\n".join(inspect_lines(found)))
     if unusable:
@@ -394,13 +366,13 @@ def demo(seed: int, scatter: bool, headless: bool, as_json: bool, folder: Path |
     from tui.demo import prepare_demo, report_demo
 
     place = folder or Path(f"fadeline-demo-{seed}{'-scatter' if scatter else ''}")
-    campaign_folder = prepare_demo(place, seed, scatter, _progress)
+    campaign_folder = prepare_demo(place, seed, scatter, progress)
     if not headless:
         _watch_demo(place, campaign_folder)
         return
-    result = report_demo(place, campaign_folder, workers, _progress)
+    result = report_demo(place, campaign_folder, workers, progress)
     if as_json:
-        _print_json(result)
+        print_json(result)
         return
     for row in result["targets"]:
         click.echo(
@@ -432,6 +404,14 @@ def _watch_demo(place: Path, campaign_folder: Path) -> None:
         stop.set()
     click.echo(f"The demo lies in {place}; open it again with: fadeline open {campaign_folder}")
 
+
+main.add_command(target_command)
+main.add_command(plan)
+main.add_command(advise)
+main.add_command(sequence)
+main.add_command(import_points)
+main.add_command(combine)
+main.add_command(standards)
 
 if __name__ == "__main__":
     main()

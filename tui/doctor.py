@@ -91,4 +91,5 @@ def _campaign(folder: Path) -> list[Finding]:
         )
     )
     findings += [Finding(False, sentence) for sentence in campaign.missing_settings()]
+    findings += [Finding(False, sentence) for sentence in campaign.detector_sentences()]
     return findings

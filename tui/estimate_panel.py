@@ -12,7 +12,7 @@ from tui.band_look import band_colour
 from tui.number_text import number, with_error
 
 if TYPE_CHECKING:
-    from reduce.records import Estimate
+    from reduce.records import Estimate, Pulsation
     from reduce.views import TargetView
 
 BAR_WIDTH = 8
@@ -58,6 +58,8 @@ def parameters_text(view: TargetView | None) -> Text:
             Text(f"Δm15       {with_error(estimate.dm15, estimate.dm15_err, 3)}"),
             Text(f"host E(B−V) {with_error(estimate.e_host, estimate.e_host_err, 3)}"),
         ]
+    if estimate.pulsation is not None:
+        lines += _pulsation_lines(estimate.pulsation)
     lines.append(Text(f"χ²         {number(estimate.chi2, 1)} of {estimate.n} points"))
     for band, mag in estimate.peak_mag.items():
         lines.append(Text.assemble((f"{band} ", f"bold {band_colour(band)}"), f"at maximum  {number(mag, 3)}"))
@@ -65,6 +67,31 @@ def parameters_text(view: TargetView | None) -> Text:
     if view.target.kind == "type_ia":
         lines.append(Text(f"Type {type_word} by spectrum" if type_word else "Type assumed, no spectrum"))
     return Text("\n").join(lines)
+
+
+def _pulsation_lines(star: Pulsation) -> list[Text]:
+    """Period and its aliases, means and moduli, one a line."""
+    lines = [
+        Text(f"Period     {with_error(star.period_d, star.period_err_d, 5)} d"),
+        Text(f"Mode       {star.mode}"),
+        Text(f"Phase      {100 * star.coverage:.0f} % covered"),
+    ]
+    lines += [
+        Text(f"  {100 * alias.probability:5.1f} %  {alias.period_d:.6g} d {alias.note}", "" if place == 0 else "dim")
+        for place, alias in enumerate(star.aliases)
+    ]
+    for mean in star.means:
+        lines.append(
+            Text.assemble(
+                (f"<{mean.band}> ", f"bold {band_colour(mean.band)}"),
+                f"{with_error(mean.mag, mean.err, 3)}  amplitude {number(mean.amplitude_mag, 2)}",
+                ("" if mean.covered else "  not covered", "#e69f00"),
+            )
+        )
+    lines += [Text(f"μ {m.band:2} {with_error(m.mag, m.err, 3)}  {m.relation}") for m in star.moduli]
+    if star.provenance:
+        lines.append(Text(star.provenance, "dim"))
+    return lines
 
 
 def budget_text(estimate: Estimate | None, width: int, plain: bool) -> Text:

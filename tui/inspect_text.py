@@ -11,6 +11,7 @@ _SHOWN = (
     ("kind", ""), ("band", ""), ("filter", ""), ("object", ""), ("camera", ""), ("mid_time", "UTC"),
     ("exposure_s", "s"), ("ra_deg", "deg"), ("dec_deg", "deg"), ("scale_arcsec", "arcsec/pixel"),
     ("gain_e_per_adu", "e-/ADU"), ("read_noise_e", "e-"), ("saturation_adu", "ADU"), ("temperature_c", "°C"),
+    ("calibrated", ""),
 )  # fmt: skip
 
 
@@ -22,6 +23,8 @@ def inspect_lines(found: Mapping[str, Any]) -> list[str]:
     lines = [f"{name}: {found['nx']} × {found['ny']} pixels"]
     for key, unit in _SHOWN:
         value = found.get(key)
+        if isinstance(value, list):
+            value = ", ".join(value) or "not yet"
         text = "not stated" if value is None or value == "" else f"{value:.8g}" if isinstance(value, float) else value
         lines.append(f"  {key.split('_')[0]:12} {text} {unit if value is not None else ''}".rstrip())
     return lines + [f"  note: {note}" for note in found.get("notes", ())]

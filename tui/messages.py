@@ -27,10 +27,12 @@ class SnapshotFetched(Message):
 class Said(Message):
     """One sentence for the status line."""
 
-    def __init__(self, sentence: str, trouble: bool = False) -> None:
+    def __init__(self, sentence: str, trouble: bool = False, flash: bool = False) -> None:
         super().__init__()
         self.sentence = sentence
         self.trouble = trouble
+        self.flash = flash
+        """Shown reversed until the next words: what cannot be overlooked."""
 
 
 def trouble_sentence(error: BaseException) -> str:

@@ -29,6 +29,11 @@ def ut(mjd: float | None) -> str:
     return f"{minutes // 60:02d}:{minutes % 60:02d}"
 
 
+def exposure_text(n: int, exposure_s: float) -> str:
+    """``120 s`` or ``3 × 120 s``."""
+    return f"{n} × {exposure_s:.0f} s" if n > 1 else f"{exposure_s:.0f} s"
+
+
 def count(n: int, word: str) -> str:
     """``1 night``, ``2 nights``."""
     return f"{n} {word}" if n == 1 else f"{n} {word}s"

@@ -12,6 +12,7 @@ import warnings
 import numpy as np
 
 from reduce.almanac.times import MJD_ZERO_JD
+from reduce.records import Floats
 from reduce.settings import Site
 
 LEAST_HARDIE_ALTITUDE_DEG = 5.0
@@ -81,6 +82,11 @@ def altitude_azimuth(mjd: float, ra_deg: float, dec_deg: float, site: Site) -> t
         ICRS.
     """
     return _observed(mjd, ra_deg, dec_deg, site, pressure_hpa=0.0)
+
+
+def altitudes(mjd: Floats, ra_deg: float, dec_deg: float, site: Site) -> Floats:
+    """Altitudes without refraction at many times, (n,) degrees; parameters as `altitude_azimuth`."""
+    return np.array([altitude_azimuth(float(when), ra_deg, dec_deg, site)[0] for when in mjd])
 
 
 def airmass(mjd: float, ra_deg: float, dec_deg: float, site: Site) -> float | None:

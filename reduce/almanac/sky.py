@@ -38,16 +38,31 @@ class Moon:
 
 def sun_altitude(mjd: float, site: Site) -> float:
     """Altitude of the Sun's centre at a time in UTC, degrees, without refraction."""
-    return float(_altitudes(_sun(np.array([mjd])), np.array([mjd]), site)[0])
+    return float(sun_altitudes(np.array([mjd]), site)[0])
+
+
+def sun_altitudes(mjd: Floats, site: Site) -> Floats:
+    """`sun_altitude` at many times, (n,)."""
+    return _altitudes(_sun(mjd), mjd, site)
+
+
+def sun_position(mjd: float) -> tuple[float, float]:
+    """Geocentric right ascension and declination of the Sun, ICRS, degrees."""
+    return _direction(_sun(np.array([mjd]))[0])
 
 
 def moon(mjd: float, ra_deg: float, dec_deg: float, site: Site) -> Moon:
     """The Moon at a time in UTC, seen from the site, with its distance from a star (ICRS)."""
-    when = np.array([mjd])
-    from_site = _moon(when) - _observer(when, site)
-    separation = separation_deg(ra_deg, dec_deg, *_direction(from_site[0]))
-    altitude = float(_altitudes(from_site, when, site)[0])
-    return Moon(altitude, separation, moon_phase(mjd)[1])
+    return moons(np.array([mjd]), ra_deg, dec_deg, site)[0]
+
+
+def moons(mjd: Floats, ra_deg: float, dec_deg: float, site: Site) -> list[Moon]:
+    """`moon` at many times."""
+    from_site = _moon(mjd) - _observer(mjd, site)
+    return [
+        Moon(float(altitude), separation_deg(ra_deg, dec_deg, *_direction(where)), moon_phase(float(when))[1])
+        for where, altitude, when in zip(from_site, _altitudes(from_site, mjd, site), mjd, strict=True)
+    ]
 
 
 def moon_phase(mjd: float) -> tuple[float, float]:

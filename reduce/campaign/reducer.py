@@ -10,20 +10,30 @@ from logging.handlers import RotatingFileHandler
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
+from reduce.campaign.host_light import HostTask, free_of_host, refused
+from reduce.campaign.intake import CALIBRATION, Intake
 from reduce.campaign.people import PROGRAM
+from reduce.campaign.setup import follow_settings, remember_settings
+from reduce.logbook.host_light import HostRow
 from reduce.logbook.lock import reducer_lock
 from reduce.pipeline import Recipe, measure_frame
 from reduce.plain_text import clean_text
 from reduce.records import Measured, Point
-from reduce.runner import TaskResult, run_tasks
+from reduce.runner import TaskResult, prepare_processes, run_tasks
 from reduce.views import FrameRow
 
 if TYPE_CHECKING:
     from reduce.campaign.door import Campaign
-    from reduce.campaign.intake import Intake
 
 FRAME_TIMEOUT_S = 300.0
-LOOK_EVERY_S = 2.0
+PRELOAD = ("reduce.campaign.warm",)
+"""Imported once in the server that workers are forked from."""
+LOOK_EVERY_S = 0.5
+"""An after-slew line within two seconds leaves no more: a frame must look the same twice."""
+LOOK_AGAIN_S = 0.25
+"""After a frame has landed that is to be seen twice."""
+LOOK_SHARE = 0.1
+"""Of the time, at most, that is spent looking: a folder on a slow disk is looked at less often."""
 MOST_ATTEMPTS = 8
 """Starts of one frame that nobody ended: its reducer was killed or the machine went down, which need not be its fault.
 A frame whose worker dies is given up earlier, see `reduce.runner.MOST_STARTS`."""
@@ -72,7 +82,7 @@ def reduce_frames(
     Parameters
     ----------
     follow
-        Look again every two seconds until ``should_stop``.
+        Look again and again until ``should_stop``.
     workers
         Processes that measure.
     progress
@@ -84,13 +94,20 @@ def reduce_frames(
         Another process reduces this campaign.
     """
     _write_log_file(campaign.folder)
+    if follow:
+        prepare_processes(PRELOAD)  # the first frame of the night shall not wait for imports
     with reducer_lock(campaign.folder):
-        intake = campaign.intake
         first = True
+        inputs: tuple[object, ...] = ()
+        remember_settings(campaign)
         while True:
             started = time.monotonic()
+            follow_settings(campaign)
+            intake = campaign.intake
             changed = intake.look(progress, should_stop)
-            if first or changed:
+            looked_s = time.monotonic() - started
+            inputs, before = campaign.inputs(), inputs
+            if first or changed or inputs != before or campaign.wants_host_work():
                 batch = _Batch(campaign, intake, workers, progress, should_stop)
                 batch.run()
                 progress("")
@@ -98,13 +115,14 @@ def reduce_frames(
                 first = False
             if not follow or should_stop():
                 return
-            _wait(LOOK_EVERY_S, should_stop)
+            pause_s = max(LOOK_AGAIN_S if intake.waiting else LOOK_EVERY_S, looked_s / LOOK_SHARE)
+            _wait(LOOK_EVERY_S if changed else pause_s, should_stop)
 
 
 def _wait(seconds: float, should_stop: Callable[[], bool]) -> None:
     end = time.monotonic() + seconds
     while time.monotonic() < end and not should_stop():
-        time.sleep(0.1)
+        time.sleep(0.05)
 
 
 def _write_log_file(folder: Path) -> None:
@@ -147,7 +165,9 @@ class _Batch:
                 self._measure(second_look)
         self._say_what_came()
         if self.measured & again:
-            self._say_what_moved(len(self.measured & again), before)
+            why = "calibration, settings or the target's place having changed"
+            self._say_what_moved(f"{len(self.measured & again)} frames measured again, {why}", before)
+        self._free_of_hosts(again)
         for target in self.campaign.targets():
             if self.should_stop():
                 return
@@ -167,7 +187,7 @@ class _Batch:
             self._take,
             before_start=lambda task: book.start_attempt(task.frame, task.digest) <= MOST_ATTEMPTS,
             should_stop=self.should_stop,
-            preload=("reduce.pipeline",),
+            preload=PRELOAD,
         )
 
     def _tasks(self) -> tuple[list[MeasureTask], set[str]]:
@@ -178,7 +198,8 @@ class _Batch:
         if self.should_stop():
             return [], set()
         self._say_what_is_refused()
-        targets, stars = tuple(self.campaign.targets()), self.campaign.sequence()
+        frames = self.intake.known_frames()  # with masters, a raw frame may stand for its calibrated copy
+        targets, stars = tuple(self.campaign.targets()), self.campaign.astrometric()
         done = book.reductions_done()
         measured_once = {frame for frame, _ in done}
         tasks = []
@@ -225,17 +246,49 @@ class _Batch:
         if not new:
             return
         nights: dict[str, list[FrameRow]] = {}
-        for row in self.campaign.frame_rows():
-            if row.id in new:
+        picture = self.campaign.frame_rows()
+        for row in picture:
+            if row.id in new and row.kind == "light":
                 nights.setdefault(row.night, []).append(row)
         for night, rows in sorted(nights.items()):
             counts = [f"{sum(row.state == state for row in rows)} {state}" for state in ("kept", "doubtful", "dropped")]
             words = f"Night {night}: {len(rows)} frames measured: {', '.join(counts)}."
             book.note("", words, PROGRAM, night=night, kind="event")
+        references = sum(row.id in new and row.kind == "reference" for row in picture)
+        if references:
+            book.note("", f"{references} reference frames measured.", PROGRAM, kind="event")
         book.set_setting(TOLD, str(len(frames)))
 
-    def _say_what_moved(self, n: int, before: tuple[Point, ...]) -> None:
-        """One line in the log when frames were measured again."""
+    def _free_of_hosts(self, again: set[str]) -> None:
+        """Take the hosts' light off where a reference, a position or a choice says how."""
+        if self.should_stop():
+            return
+        tasks = self.campaign.host_tasks()
+        if not tasks:
+            return
+        before = self.campaign.curve_points()
+        self.done, self.total = 0, len(tasks)
+        rows: list[HostRow] = []
+
+        def take(result: TaskResult[HostTask, HostRow]) -> None:
+            self.done += 1
+            self.progress(f"host light of {self.done} of {self.total} frames")
+            if result.value is not None:
+                rows.append(result.value)
+            elif result.ending != "stopped":
+                _log.error("host light of %s: %s\n%s", result.task.key[:1], result.sentence, result.detail)
+                rows.append(refused(result.task, f"The host's light could not be taken off: {result.sentence}"))
+
+        run_tasks(free_of_host, tasks, min(self.workers, len(tasks)), FRAME_TIMEOUT_S, take,
+                  should_stop=self.should_stop, preload=PRELOAD)  # fmt: skip
+        self.campaign.book.add_host_rows(rows)
+        earlier = [row for row in rows if row.frame in again or row.frame not in self.measured]
+        if earlier:
+            methods = sorted({row.host_light.method for row in earlier})
+            self._say_what_moved(f"Host light taken off {len(earlier)} earlier frames ({', '.join(methods)})", before)
+
+    def _say_what_moved(self, what: str, before: tuple[Point, ...]) -> None:
+        """One line in the log when points are made of other numbers than before."""
         old = {(p.star, p.night, p.band): p.mag for p in before if p.mag is not None}
         moves = [
             abs(point.mag - old[key])
@@ -248,9 +301,7 @@ class _Batch:
             if moved
             else "no nightly point moved by more than 1 mmag"
         )
-        self.campaign.book.note(
-            "", f"{n} frames measured again, calibration or settings having changed: {words}.", PROGRAM, kind="event"
-        )
+        self.campaign.book.note("", f"{what}: {words}.", PROGRAM, kind="event")
 
     # ---- report ------------------------------------------------------------------------------------------
 
@@ -258,7 +309,7 @@ class _Batch:
         """Rows of all lights and unreadable files, or only of those that are new."""
         picture = self.campaign.frame_rows()
         durations = {row.frame: row.seconds for row in self.campaign.measured()}
-        shown = [row for row in picture if row.outcome != "calibration"]
+        shown = [row for row in picture if row.kind not in (*CALIBRATION, "reference")]
         rows = [
             _row(row, durations.get(row.id))
             for row in shown
@@ -284,6 +335,7 @@ class _Batch:
             "unreadable": unreadable,
             "waiting": len(self.intake.waiting),
             "calibration": sum(row.outcome == "calibration" for row in picture),
+            "reference": sum(row.kind == "reference" for row in picture),
             "seconds": round(seconds, 2),
         }
         sentence = (

@@ -8,6 +8,8 @@ from reduce.records import Estimate, Point, Target
 from reduce.views import FrameRow, Step
 
 AGAIN = "to measure again"
+BY_SETTINGS = "observatory.toml"
+"""A reason that names the settings file is mended in Setup."""
 
 
 def _count(n: int, word: str) -> str:
@@ -73,6 +75,9 @@ def steps_of(
     else:
         distance = Step("Distance", "waiting", "cannot tell yet" if good else "")
     steps = (frames, calibration, field, photometry, curve, distance)
+    unset = [row for row in rows if row.outcome == "unreadable" and BY_SETTINGS in row.reason]
+    if unset and not mine:
+        return steps, f"{_count(len(unset), 'frame')} cannot be measured yet: {unset[0].reason}", "Setup"
     if beside and not mine:
         sentence = f"{target.name} is not on any of {_count(len(beside), 'recognised frame')}: compare its position."
         return steps, sentence, "Field"

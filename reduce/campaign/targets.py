@@ -3,9 +3,12 @@
 from __future__ import annotations
 
 import math
+from collections.abc import Mapping
+from dataclasses import replace
 from pathlib import Path
 from typing import get_args
 
+from reduce.candles.relations import names_for
 from reduce.plain_text import PlainError, clean_text
 from reduce.records import ReddeningScale, Target, TargetKind
 
@@ -14,7 +17,7 @@ class TargetError(PlainError):
     """What was typed for a target cannot be understood."""
 
 
-def _angle(text: str, what: str, hours: bool) -> float:
+def parse_angle(text: str, what: str, hours: bool) -> float:
     """Decimal degrees, or sexagesimal (hours for right ascension) when the text holds colons or blanks."""
     parts = text.strip().replace(":", " ").split()
     try:
@@ -32,11 +35,18 @@ def _angle(text: str, what: str, hours: bool) -> float:
 
 
 def parse_position(text: str, what: str) -> tuple[float, float]:
-    """``RA,DEC`` → degrees, ICRS; each decimal degrees or sexagesimal (RA then in hours)."""
+    """``RA,DEC`` → degrees, ICRS; each decimal degrees or sexagesimal (RA then in hours).
+
+    The comma may be left out where it is clear: between two numbers, or between three and three.
+    """
     parts = text.split(",")
+    words = text.split()
+    if len(parts) == 1 and len(words) in (2, 6):
+        half = len(words) // 2
+        parts = [" ".join(words[:half]), " ".join(words[half:])]
     if len(parts) != 2:
         raise TargetError(f"{what} {clean_text(text)!r} is not RA,DEC.")
-    ra, dec = _angle(parts[0], f"{what}: RA", True), _angle(parts[1], f"{what}: Dec", False)
+    ra, dec = parse_angle(parts[0], f"{what}: RA", True), parse_angle(parts[1], f"{what}: Dec", False)
     if not 0 <= ra < 360:
         raise TargetError(f"{what}: RA {ra:g} is outside 0 to 360 degrees.")
     if not -90 <= dec <= 90:
@@ -57,14 +67,8 @@ def parse_target(text: str, ebv_mw: str | None, host: str | None, reference: Pat
         raise TargetError(f"Target {clean_text(text)!r} is not NAME,RA,DEC,KIND or NAME,RA,DEC,KIND,Z.")
     name = clean_text(parts[0], 60)
     ra, dec = parse_position(f"{parts[1]},{parts[2]}", f"Target {name}")
-    if parts[3] not in get_args(TargetKind):
-        kinds = ", ".join(get_args(TargetKind))
-        raise TargetError(f"Target {name}: kind {clean_text(parts[3])!r} is not one of {kinds}.")
-    z = None
-    if len(parts) == 5 and parts[4]:
-        z = _number(parts[4], f"Target {name}: redshift")
-        if not -0.01 <= z <= 2:
-            raise TargetError(f"Target {name}: redshift {z:g} is outside −0.01 to 2; a velocity in km/s is not meant.")
+    _refuse_kind(parts[3], name)
+    z = _redshift(parts[4], name) if len(parts) == 5 and parts[4] else None
     e, scale = _reddening(ebv_mw, name) if ebv_mw else (None, "SF11")
     host_ra, host_dec = parse_position(host, f"Host of {name}") if host else (None, None)
     return Target(
@@ -72,6 +76,110 @@ def parse_target(text: str, ebv_mw: str | None, host: str | None, reference: Pat
         host_ra_deg=host_ra, host_dec_deg=host_dec,
         reference_folder=str(reference.resolve()) if reference else None,
     )  # fmt: skip
+
+
+def new_target(facts: Mapping[str, str]) -> Target:
+    """A `Target` from what was typed field by field: name, position, kind, and the facts that `corrected` takes.
+
+    Raises
+    ------
+    TargetError
+        One sentence.
+    """
+    given = {key: text.strip() for key, text in facts.items() if text.strip()}
+    name = clean_text(given.pop("name", ""), 60)
+    if not name:
+        raise TargetError("The target has no name.")
+    if "position" not in given:
+        raise TargetError(f"Target {name} has no position: type RA, Dec in degrees or as hh:mm:ss, dd:mm:ss.")
+    ra, dec = parse_position(given.pop("position"), f"Target {name}")
+    kind = given.pop("kind", "type_ia")
+    _refuse_kind(kind, name)
+    reference = given.pop("reference", "")
+    target = Target(name=name, kind=kind, ra_deg=ra, dec_deg=dec)  # type: ignore[arg-type]
+    return corrected(target, **given, reference=Path(reference).expanduser() if reference else None)
+
+
+def _refuse_kind(kind: str, name: str) -> None:
+    if kind not in get_args(TargetKind):
+        kinds = ", ".join(get_args(TargetKind))
+        raise TargetError(f"Target {name}: kind {clean_text(kind)!r} is not one of {kinds}.")
+
+
+def corrected(
+    target: Target,
+    *,
+    position: str | None = None,
+    z: str | None = None,
+    ebv_mw: str | None = None,
+    spectrum: str | None = None,
+    host: str | None = None,
+    reference: Path | None = None,
+    metallicity: str | None = None,
+    relation: str | None = None,
+) -> Target:
+    """The target with new facts as they were typed; what is None stays, an empty text (or path) is no longer known.
+
+    Raises
+    ------
+    TargetError
+        One sentence.
+    """
+    name = target.name
+    if position is not None:
+        ra, dec = parse_position(position, f"Target {name}")
+        target = replace(target, ra_deg=ra, dec_deg=dec)
+    if z is not None:
+        target = replace(target, z=_redshift(z, name) if z else None)
+    if ebv_mw is not None:
+        e, scale = _reddening(ebv_mw, name) if ebv_mw else (None, target.ebv_scale)
+        target = replace(target, ebv_mw=e, ebv_scale=scale)
+    if spectrum is not None:
+        target = replace(target, spectroscopic_type=clean_text(spectrum, 20) or None)
+    if host is not None:
+        host_ra, host_dec = parse_position(host, f"Host of {name}") if host else (None, None)
+        target = replace(target, host_ra_deg=host_ra, host_dec_deg=host_dec)
+    if reference == Path():
+        target = replace(target, reference_folder=None)
+    elif reference is not None:
+        if not reference.is_dir():
+            raise TargetError(f"The reference folder {clean_text(reference, 300)} does not exist.")
+        target = replace(target, reference_folder=str(reference.resolve()))
+    if metallicity is not None:
+        dex, err = _metallicity(metallicity, name)
+        target = replace(target, metallicity_dex=dex, metallicity_err=err)
+    if relation is not None:
+        target = replace(target, relation=_relation(relation, target))
+    return target
+
+
+def _metallicity(text: str, name: str) -> tuple[float, float | None]:
+    value, _, error = (part.strip() for part in text.partition(","))
+    dex = _number(value, f"Target {name}: metallicity")
+    err = _number(error, f"Target {name}: error of the metallicity") if error else None
+    if not -4 <= dex <= 1.5:
+        raise TargetError(f"Target {name}: metallicity {dex:g} is outside −4 to 1.5 dex; it is relative to the Sun.")
+    if err is not None and not 0 < err <= 3:
+        raise TargetError(f"Target {name}: error of the metallicity {err:g} is outside 0 to 3 dex.")
+    return dex, err
+
+
+def _relation(text: str, target: Target) -> str | None:
+    if not text.strip():
+        return None
+    names = names_for(target.kind)
+    found = next((name for name in names if name.casefold() == text.strip().casefold()), None)
+    if found is None:
+        known = ", ".join(names) or f"none for kind {target.kind}"
+        raise TargetError(f"Target {target.name}: relation {clean_text(text, 60)!r} is not one of: {known}.")
+    return found
+
+
+def _redshift(text: str, name: str) -> float:
+    z = _number(text, f"Target {name}: redshift")
+    if not -0.01 <= z <= 2:
+        raise TargetError(f"Target {name}: redshift {z:g} is outside −0.01 to 2; a velocity in km/s is not meant.")
+    return z
 
 
 def _number(text: str, what: str) -> float:

@@ -2,10 +2,10 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 from typing import Protocol
 
-from reduce.candles.distance import MODEL_H0
+from reduce.candles.assumptions import Assumptions
 from reduce.records import Estimate, LightCurve, Target, TargetKind
 
 
@@ -21,13 +21,35 @@ class Candle(Protocol):
 class TypeIa:
     """Type Ia supernovae by decline rate."""
 
-    h0: float = MODEL_H0
+    assumptions: Assumptions = field(default_factory=Assumptions)
 
     def fit(self, curve: LightCurve, target: Target) -> Estimate:
         """See `reduce.candles.type_ia.fit`."""
         from reduce.candles import type_ia  # here, because it brings scipy
 
-        return type_ia.fit(curve, target, h0=self.h0)
+        return type_ia.fit(curve, target, self.assumptions)
+
+
+@dataclass(frozen=True, slots=True)
+class Cepheid:
+    """Classical Cepheids by period and luminosity."""
+
+    def fit(self, curve: LightCurve, target: Target) -> Estimate:
+        """See `reduce.candles.cepheid.fit`."""
+        from reduce.candles import cepheid
+
+        return cepheid.fit(curve, target)
+
+
+@dataclass(frozen=True, slots=True)
+class RRLyrae:
+    """RR Lyrae stars by metallicity and luminosity."""
+
+    def fit(self, curve: LightCurve, target: Target) -> Estimate:
+        """See `reduce.candles.rr_lyrae.fit`."""
+        from reduce.candles import rr_lyrae
+
+        return rr_lyrae.fit(curve, target)
 
 
 @dataclass(frozen=True, slots=True)
@@ -45,6 +67,9 @@ class NoRelation:
         )  # fmt: skip
 
 
-def candle_for(kind: TargetKind) -> Candle:
-    """The candle of a kind of target."""
-    return TypeIa() if kind == "type_ia" else NoRelation(kind)
+def candle_for(kind: TargetKind, assumptions: Assumptions | None = None) -> Candle:
+    """The candle of a kind of target; ``assumptions`` are those of type Ia."""
+    by_kind: dict[TargetKind, Candle] = {"cepheid": Cepheid(), "rr_lyrae": RRLyrae()}
+    if kind == "type_ia":
+        return TypeIa(assumptions or Assumptions())
+    return by_kind.get(kind) or NoRelation(kind)

@@ -8,8 +8,9 @@
 from __future__ import annotations
 
 import json
-from collections.abc import Mapping
-from dataclasses import dataclass
+import math
+from collections.abc import Collection, Mapping
+from dataclasses import dataclass, replace
 from functools import cache
 from importlib.resources import files
 from typing import Any
@@ -85,6 +86,17 @@ class TypeIaModel:
     prior: Prior
     scatter: Scatter
     validity: Validity
+
+    def without(self, priors: Collection[str]) -> TypeIaModel:
+        """The same model with some of `assumptions.PRIORS` switched off: dust, Δm15 flat, no grey scatter."""
+        prior, scatter = self.prior, self.scatter
+        if "dust" in priors:
+            prior = replace(prior, e_host_scale=math.inf)
+        if "dm15" in priors:
+            prior = replace(prior, dm15_sigma_low=math.inf, dm15_sigma_high=math.inf)
+        if "grey" in priors:
+            scatter = replace(scatter, grey=0.0)
+        return replace(self, prior=prior, scatter=scatter)
 
     def absolute_mag(self, band: str, dm15: Floats | float) -> Floats:
         """M_X at the time of B maximum, without host dust, on H0 = 73.04."""

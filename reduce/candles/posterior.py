@@ -2,19 +2,19 @@
 
 At a node r = y - M - T - K and the design [1, R_X] give, with A = XᵀC⁻¹X + diag(0, 1) and
 b = XᵀC⁻¹r - (0, 1/τ), a normal in (μ, E) cut at E = 0. Limits and weak detections multiply every
-node by their flux likelihood, integrated over μ.
+node by their flux likelihood, expanded to second order about the most probable (μ, E).
 """
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 from numpy.typing import NDArray
 from scipy.linalg import cholesky, solve_triangular
-from scipy.special import log_ndtr, logsumexp
+from scipy.special import log_ndtr
 
-from reduce.candles.covariance import Covariance, covariance
+from reduce.candles.covariance import Covariance, covariance, passband_error
 from reduce.candles.distance import rest_phase
 from reduce.candles.model import FIRST_PHASE, LAST_PHASE, TypeIaModel
 from reduce.candles.points import MAG_PER_RELATIVE_FLUX, Points
@@ -22,16 +22,14 @@ from reduce.records import FLUX_ZERO_POINT, Floats
 
 RISE_D = 18.0
 """Rest-frame days from explosion to B maximum (Ganeshalingam et al. 2011: 18.0; from memory)."""
-FLUX_SHAPE_ERROR = 0.1
-"""Relative error of the model's flux where a limit or weak detection is compared with it."""
 LARGEST_FLUX_CHI2 = 25.0
 """Bound of one flux point's χ²: a bad subtraction must not outweigh the light curve."""
 SUPPORT = 9.0
 """Nodes further than this below the peak in ln P are left out: exp(-9) = 1e-4."""
 FURTHEST_D = 18.0
 GRID = 31
-MU_STEPS = np.linspace(-4.5, 4.5, 25)
-"""Where the integral over μ is taken, in standard deviations of its marginal at a node."""
+FLUX_STEPS = 3
+"""Steps towards the most probable (μ, E) of a node; the third moves μ by less than a mmag."""
 
 
 @dataclass(frozen=True, slots=True)
@@ -76,6 +74,37 @@ class System:
 
 
 @dataclass(frozen=True, slots=True)
+class Quadratic:
+    """-½ θᵀAθ + bᵀθ in θ = (μ, E) for every decline rate: the elements of A, shape (n,), and b, shape (2, n)."""
+
+    mu_mu: Floats
+    mu_e: Floats
+    e_e: Floats
+    linear: Floats
+
+    @property
+    def determinant(self) -> Floats:
+        """Of A."""
+        return self.mu_mu * self.e_e - self.mu_e**2
+
+    @property
+    def centre(self) -> Floats:
+        """A⁻¹b, without the cut at E = 0."""
+        b = self.linear
+        top = np.array([self.e_e * b[0] - self.mu_e * b[1], self.mu_mu * b[1] - self.mu_e * b[0]])
+        return np.asarray(top / self.determinant, float)
+
+    def times(self, mu: Floats, e: Floats) -> Floats:
+        """Aθ."""
+        return np.array([self.mu_mu * mu + self.mu_e * e, self.mu_e * mu + self.e_e * e])
+
+    def at(self, mu: Floats, e: Floats) -> Floats:
+        """Its value."""
+        theta = np.array([mu, e])
+        return np.asarray((self.linear * theta).sum(0) - 0.5 * (theta * self.times(mu, e)).sum(0), float)
+
+
+@dataclass(frozen=True, slots=True)
 class Nodes:
     """Log probability and the moments of (μ, E) at grid nodes, shape (t_max, Δm15)."""
 
@@ -117,7 +146,7 @@ def system_at(data: Data, keep: NDArray[np.bool_], t_max: float) -> System:
     return System(points, parts, dust, whitener, design, normal, np.linalg.inv(normal))
 
 
-def _cut_normal(mean: Floats, sigma: float) -> tuple[Floats, Floats]:
+def _cut_normal(mean: Floats, sigma: Floats) -> tuple[Floats, Floats]:
     """Mean and variance of a normal cut at zero."""
     t = mean / sigma
     hazard = np.exp(-0.5 * t**2 - 0.5 * np.log(2.0 * np.pi) - log_ndtr(t))
@@ -130,22 +159,28 @@ def _row(system: System, data: Data, t_max: float, dm15: Floats) -> tuple[Floats
     phase = data.phase(points.mjd, t_max)
     shape = data.model.standard_mags(points.bands, phase, dm15, data.z)
     residual = system.whitener @ (points.value[:, None] - shape)
-    b = system.design.T @ residual
-    b[1] -= 1.0 / prior.e_host_scale
-    centre = system.inverse @ b
-    sigma = float(np.sqrt(system.inverse[1, 1]))
-    ln_p = -0.5 * (residual**2).sum(0) + 0.5 * (b * centre).sum(0) + log_ndtr(centre[1] / sigma)
-    ln_p += prior.ln_dm15(dm15)
+    linear = system.design.T @ residual
+    linear[1] -= 1.0 / prior.e_host_scale
+    normal = [np.full(len(dm15), system.normal[i, j]) for i, j in ((0, 0), (0, 1), (1, 1))]
+    node = Quadratic(normal[0], normal[1], normal[2], linear)
+    ln_p = -0.5 * (residual**2).sum(0) + prior.ln_dm15(dm15)
+    if len(data.fluxes):
+        node, more = _with_fluxes(node, data, t_max, dm15)
+        ln_p += more
+    centre = node.centre
+    sigma = np.sqrt(node.mu_mu / node.determinant)
+    ln_p += 0.5 * (node.linear * centre).sum(0) + log_ndtr(centre[1] / sigma)
     e, e_var = _cut_normal(centre[1], sigma)
-    slope = system.normal[0, 1] / system.normal[0, 0]
-    mu = b[0] / system.normal[0, 0] - slope * e
-    mu_var = 1.0 / system.normal[0, 0] + slope**2 * e_var
-    nodes = (ln_p, mu, mu_var, e, e_var, -slope * e_var)
-    return _with_fluxes(system, data, t_max, dm15, centre, nodes) if len(data.fluxes) else nodes
+    slope = node.mu_e / node.mu_mu
+    mu = node.linear[0] / node.mu_mu - slope * e
+    return ln_p, mu, 1.0 / node.mu_mu + slope**2 * e_var, e, e_var, -slope * e_var
 
 
-def _model_flux(data: Data, t_max: float, dm15: Floats) -> tuple[Floats, Floats]:
-    """Flux at μ = 0 and E = 0, shape (flux point, Δm15), and the host coefficient of each point.
+def _model_flux(data: Data, t_max: float, dm15: Floats) -> tuple[Floats, Floats, Floats]:
+    """Flux at μ = 0 and E = 0, shape (flux point, Δm15); of each point the host coefficient and the relative error.
+
+    The error is that of magnitude points: template and colour scatter, the nugget, what a night and a band share. A
+    larger one would give points that scatter down to below S/N 5 less weight than those that scatter up.
 
     Before the first day of the model the flux grows with the square of the time since explosion (common
     practice).
@@ -154,53 +189,51 @@ def _model_flux(data: Data, t_max: float, dm15: Floats) -> tuple[Floats, Floats]
     phase = data.phase(points.mjd, t_max)
     held = np.maximum(phase, FIRST_PHASE)
     rise = np.clip((phase + RISE_D) / (FIRST_PHASE + RISE_D), 0.0, 1.0) ** 2
-    mag = data.model.standard_mags(points.bands, held, dm15, data.z)
-    dust = np.empty(len(points))
+    model = data.model
+    mag = model.standard_mags(points.bands, held, dm15, data.z)
+    dust, colour = np.empty(len(points)), np.empty(len(points))
     for band, rows in points.bands:
-        mag[rows] += data.model.mw_coefficients[band] * data.ebv_mw
-        dust[rows] = data.model.host_coefficient(band, data.z)
-    return 10.0 ** (-0.4 * (mag - FLUX_ZERO_POINT)) * rise[:, None], dust
+        mag[rows] += model.mw_coefficients[band] * data.ebv_mw
+        dust[rows] = model.host_coefficient(band, data.z)
+        colour[rows] = model.scatter.colour[band]
+    scatter = model.shape_scatter(points.bands, phase) ** 2 + colour**2 + model.scatter.nugget**2
+    shared = points.err_night**2 + points.err_band**2 + passband_error(points, phase) ** 2
+    err_mag = np.sqrt(scatter + shared)
+    return 10.0 ** (-0.4 * (mag - FLUX_ZERO_POINT)) * rise[:, None], dust, err_mag / MAG_PER_RELATIVE_FLUX
 
 
-def _with_fluxes(
-    system: System, data: Data, t_max: float, dm15: Floats, centre: Floats, nodes: tuple[Floats, ...]
-) -> tuple[Floats, ...]:
-    """Multiply each node by the flux likelihood, integrated over μ with E at its conditional mean.
+def _with_fluxes(node: Quadratic, data: Data, t_max: float, dm15: Floats) -> tuple[Quadratic, Floats]:
+    """Add the flux likelihood, expanded about the most probable (μ, E ≥ 0) of each node; and what ln P gains.
 
-    ``centre`` is (μ̂, Ê) without the cut at E = 0, shape (2, Δm15).
+    A flux of mean p and variance 1 + (relative p)², in units of its measured error, is Gaussian in p; p falls by
+    p / 1.0857 for each mag of μ + R E. Steps follow the expected curvature (Fisher scoring).
     """
-    ln_p, mu, mu_var = nodes[:3]
-    trial_mu = mu[:, None] + np.sqrt(mu_var)[:, None] * MU_STEPS[None, :]
-    off = trial_mu - centre[0][:, None]
-    v = system.inverse
-    sigma_e = float(np.sqrt(v[1, 1] - v[0, 1] ** 2 / v[0, 0]))
-    e_centre = centre[1][:, None] + v[0, 1] / v[0, 0] * off
-    trial_e, trial_e_var = _cut_normal(e_centre, sigma_e)
-    trial_e = np.maximum(trial_e, 0.0)
-    before = -0.5 * off**2 / v[0, 0] + log_ndtr(e_centre / sigma_e)
-
-    flux, dust = _model_flux(data, t_max, dm15)
-    dimming = trial_mu[None] + dust[:, None, None] * trial_e[None]
-    predicted = flux[:, :, None] * 10.0 ** (-0.4 * dimming)
-    shared = np.hypot(data.fluxes.err_band, data.fluxes.err_night) / MAG_PER_RELATIVE_FLUX
-    relative = np.hypot(FLUX_SHAPE_ERROR, shared)[:, None, None]
-    variance = data.fluxes.err[:, None, None] ** 2 + (relative * predicted) ** 2
-    chi2 = np.minimum((data.fluxes.value[:, None, None] - predicted) ** 2 / variance, LARGEST_FLUX_CHI2)
-    spread = np.log(variance / data.fluxes.err[:, None, None] ** 2)
-    after = before - 0.5 * (chi2 + spread).sum(0)
-
-    weight = np.exp(after - after.max(axis=1, keepdims=True))
-    weight /= weight.sum(axis=1, keepdims=True)
-    new_mu, new_e = (weight * trial_mu).sum(axis=1), (weight * trial_e).sum(axis=1)
-    mu_off, e_off = trial_mu - new_mu[:, None], trial_e - new_e[:, None]
-    return (
-        ln_p + logsumexp(after, axis=1) - logsumexp(before, axis=1),
-        new_mu,
-        np.maximum((weight * mu_off**2).sum(axis=1), 1e-8),
-        new_e,
-        np.maximum((weight * (e_off**2 + trial_e_var)).sum(axis=1), 1e-8),
-        (weight * mu_off * e_off).sum(axis=1),
-    )
+    flux, dust, relative = _model_flux(data, t_max, dm15)
+    bright = flux / data.fluxes.err[:, None]
+    measured = (data.fluxes.value / data.fluxes.err)[:, None]
+    r, rel2 = dust[:, None], relative[:, None] ** 2
+    e = np.maximum(node.centre[1], 0.0)
+    mu = (node.linear[0] - node.mu_e * e) / node.mu_mu
+    for turn in range(FLUX_STEPS + 1):
+        p = bright * np.exp(-(mu + r * e) / MAG_PER_RELATIVE_FLUX)
+        variance = 1.0 + rel2 * p**2
+        off = measured - p
+        chi2 = off**2 / variance
+        counts = (chi2 < LARGEST_FLUX_CHI2) * p / MAG_PER_RELATIVE_FLUX
+        slope = -counts * (off + rel2 * p * (chi2 - 1.0)) / variance
+        weight = counts**2 * (1.0 + 2.0 * rel2**2 * p**2 / variance) / variance
+        grown = Quadratic(
+            node.mu_mu + weight.sum(0), node.mu_e + (r * weight).sum(0), node.e_e + (r * r * weight).sum(0), node.linear
+        )
+        # the linear term that gives the sum of both the right slope here
+        gain = np.array([slope.sum(0), (r * slope).sum(0)]) + grown.times(mu, e) - node.times(mu, e)
+        grown = replace(grown, linear=node.linear + gain)
+        if turn < FLUX_STEPS:
+            e = np.maximum(grown.centre[1], 0.0)
+            mu = mu + np.clip((grown.linear[0] - grown.mu_e * e) / grown.mu_mu - mu, -1.0, 1.0)
+    here = -0.5 * (np.minimum(chi2, LARGEST_FLUX_CHI2) + np.log(variance)).sum(0)
+    value = here + node.at(mu, e) - grown.at(mu, e)
+    return grown, value - 0.5 * np.log(grown.determinant / node.determinant)
 
 
 def evaluate(system: System, data: Data, t_max: Floats, dm15: Floats) -> Nodes:

@@ -30,6 +30,13 @@ PEAK_DIP = 0.5
 LEAST_APART_D = 3.0
 """Maxima closer than this are one time of maximum, known less well."""
 DM15_STEP = 0.05
+CLOCK_ERROR_D, CLOCK_ERROR_PER_DAY, CLOCK_LATEST_D = 0.5, 0.02, 30.0
+"""Added in quadrature to the error of t_max when the first point comes p > 0 days after maximum: 0.5 d + 0.02 p, to
++30 d, all in the rest frame.
+
+Measured on 75 supernovae of the public nearby samples whose light curves were cut to begin at +5 to +20 d (the half
+whose names are not held out): t_max differed from that of the whole light curve by 0.7 d more than the grid allows.
+"""
 
 
 @dataclass(frozen=True, slots=True)
@@ -44,10 +51,12 @@ class Solved:
     mean: Floats
     """(μ, host E, t_max, Δm15)."""
     cov: Floats
-    """(4, 4) covariance of ``mean``."""
+    """(4, 4) covariance of ``mean``, the clock's error included."""
     residual: Floats
     """Of the points of ``system`` at the most probable node, mag."""
     chi2: float
+    clock_err_d: float
+    """Part of the error of t_max that the grid does not hold, observed days; see `_clock_error`."""
 
     @property
     def err(self) -> Floats:
@@ -123,7 +132,17 @@ def _summary(data: Data, keep: NDArray[np.bool_], system: System, nodes: Nodes) 
     mu, e = float(nodes.mu[i, j]), float(nodes.e[i, j])
     left = residuals(system, data, float(nodes.t_max[i]), float(nodes.dm15[j]), mu, e)
     white = system.whitener @ left
-    return Solved(data, keep, system, nodes, mean, cov, left, float(white @ white))
+    clock = _clock_error(data, system, float(mean[2]))
+    cov[2, 2] += clock**2
+    return Solved(data, keep, system, nodes, mean, cov, left, float(white @ white), clock)
+
+
+def _clock_error(data: Data, system: System, t_max: float) -> float:
+    """Supernovae do not keep time with the templates: what that adds where no point precedes maximum, observed days."""
+    first = float(data.phase(system.points.mjd, t_max).min())
+    if first <= 0.0:
+        return 0.0
+    return (CLOCK_ERROR_D + CLOCK_ERROR_PER_DAY * min(first, CLOCK_LATEST_D)) * (1.0 + data.z)
 
 
 def separate_maxima(nodes: Nodes) -> list[float]:

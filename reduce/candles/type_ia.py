@@ -3,22 +3,27 @@
 from __future__ import annotations
 
 import math
-from dataclasses import replace
+from collections.abc import Sequence
+from dataclasses import dataclass, replace
 
 import numpy as np
 
+from reduce.candles.assumptions import Assumptions
 from reduce.candles.budget import budget, total_error
-from reduce.candles.cautions import cautions, input_cautions
-from reduce.candles.distance import MODEL_H0, h0_magnitude_shift
+from reduce.candles.cautions import cautions, input_cautions, prior_sentences
 from reduce.candles.drawing import fit_curves, fit_points, peak_mags
+from reduce.candles.hubble import hubble_expectation
 from reduce.candles.model import FIRST_PHASE, LAST_PHASE, TypeIaModel, type_ia_model
+from reduce.candles.offsets import source_offsets
 from reduce.candles.points import LEAST_SNR, select
 from reduce.candles.posterior import Data
 from reduce.candles.reddening import to_sf11
+from reduce.candles.sampling import draw_with_all_errors, posterior
 from reduce.candles.search import LEAST_POINTS
 from reduce.candles.solve import Solved, separate_maxima, solve
-from reduce.records import Estimate, LightCurve, Target
+from reduce.records import BudgetLine, Estimate, Floats, LightCurve, Target
 
+MODEL_ASSUMPTIONS = Assumptions()
 LARGEST_FIT_ERROR = 0.3
 """Beyond it the posterior has several peaks or no shape: no distance is quoted."""
 HOPELESS_CHI2 = 20.0
@@ -26,16 +31,9 @@ HOPELESS_CHI2 = 20.0
 LARGEST_T_MAX_ERROR_BEFORE = 2.0
 """Days; a maximum that is still to come must be known this well."""
 OTHER_Z = 0.02
-NO_RISE_T_MAX_ERROR_D = 0.5
-"""Added in quadrature to the error of t_max when no point precedes maximum, rest-frame days.
-
-Measured on 131 supernovae of the public nearby samples whose light curves were cut to begin at 0 to +20 d:
-t_max differed from that of the whole light curve by 1.2 to 1.6 times its formal error, an excess of 0.4 to
-0.8 d.
-"""
 
 
-def fit(curve: LightCurve, target: Target, *, h0: float = MODEL_H0) -> Estimate:
+def fit(curve: LightCurve, target: Target, assumptions: Assumptions = MODEL_ASSUMPTIONS) -> Estimate:
     """Fit time of maximum, decline rate, host dust and distance modulus, without a starting guess.
 
     Parameters
@@ -44,53 +42,73 @@ def fit(curve: LightCurve, target: Target, *, h0: float = MODEL_H0) -> Estimate:
         Standard-system points, not dereddened, observer's frame.
     target
         Gives redshift and Milky Way reddening; unknown ones are named in the warnings, never taken as known.
-    h0
-        Scale of μ, km/s/Mpc.
+    assumptions
+        The absolute scale of μ, and priors to do without.
 
     Returns
     -------
     Estimate
         ``mu`` is None when the data cannot tell yet and ``verdict`` says why.
     """
-    model = type_ia_model()
-    scale = _scale(h0)
-    data = _data(curve, target, model)
+    model = type_ia_model().without(assumptions.without)
+    data = _data(curve, target, model, assumptions)
+    context = _Context(curve, target, model, assumptions)
     if len(data.mags) < LEAST_POINTS:
-        why = (
+        return context.estimate(
             f"cannot tell yet: {len(data.mags)} usable points with S/N of {LEAST_SNR:.0f} or more in "
             f"{' '.join(model.bands)}, at least {LEAST_POINTS} are needed."
         )
-        return _nothing(curve, target, why, scale, model)
     solved = solve(data)
     if solved is None:
-        why = (
+        return context.estimate(
             f"cannot tell: fewer than {LEAST_POINTS} points lie within {FIRST_PHASE:.0f} to "
             f"+{LAST_PHASE:.0f} d of any maximum, or all were rejected."
         )
-        return _nothing(curve, target, why, scale, model)
-    return _estimate(curve, target, solved, h0)
+    return _estimate(context, solved)
 
 
-def _data(curve: LightCurve, target: Target, model: TypeIaModel) -> Data:
+def draws(
+    curve: LightCurve,
+    target: Target,
+    n: int,
+    generator: np.random.Generator,
+    assumptions: Assumptions = MODEL_ASSUMPTIONS,
+) -> Floats | None:
+    """(n, 4) draws of (μ, host E, t_max, Δm15) from the posterior with all errors; None where μ is withheld."""
+    model = type_ia_model().without(assumptions.without)
+    data = _data(curve, target, model, assumptions)
+    solved = solve(data) if len(data.mags) >= LEAST_POINTS else None
+    if solved is None or _why_not(solved) is not None:
+        return None
+    outside = _error_outside(solved, budget(solved, target, _redshift_error(solved, target)))
+    return draw_with_all_errors(solved, n, generator, assumptions.shift_mag, outside)
+
+
+def _data(curve: LightCurve, target: Target, model: TypeIaModel, assumptions: Assumptions) -> Data:
     ebv = 0.0 if target.ebv_mw is None else to_sf11(target.ebv_mw, target.ebv_scale)
-    mags, fluxes = select(curve, model)
+    mags, fluxes = select(curve, model, offset_prior="offsets" not in assumptions.without)
     dust = np.array([model.mw_coefficients[band] for band in mags.band.tolist()])
     return Data(replace(mags, value=mags.value - dust * ebv), fluxes, target.z or 0.0, ebv, model)
 
 
-def _scale(h0: float) -> str:
-    if h0 == MODEL_H0:
-        return f"H0 = {h0:.2f} km/s/Mpc (Cepheid anchor of the model)"
-    shift = h0_magnitude_shift(h0, MODEL_H0)
-    return f"H0 = {h0:.2f} km/s/Mpc (μ moved by {shift:+.3f} mag from the model's {MODEL_H0})"
+@dataclass(frozen=True, slots=True)
+class _Context:
+    """What an estimate says whether or not there is a fit."""
 
+    curve: LightCurve
+    target: Target
+    model: TypeIaModel
+    assumptions: Assumptions
 
-def _nothing(curve: LightCurve, target: Target, why: str, scale: str, model: TypeIaModel) -> Estimate:
-    return Estimate(
-        target=target.name, kind="type_ia", mu=None, mu_err=None, mu_err_fit=None, t_max=None, t_max_err=None,
-        dm15=None, dm15_err=None, e_host=None, e_host_err=None, chi2=None, n=0, verdict=why, scale=scale,
-        warnings=tuple(input_cautions(curve, target, model.bands)),
-    )  # fmt: skip
+    def estimate(self, verdict: str) -> Estimate:
+        """Without any fit."""
+        return Estimate(
+            target=self.target.name, kind="type_ia", mu=None, mu_err=None, mu_err_fit=None, t_max=None, t_max_err=None,
+            dm15=None, dm15_err=None, e_host=None, e_host_err=None, chi2=None, n=0, verdict=verdict,
+            scale=self.assumptions.scale, warnings=tuple(input_cautions(self.curve, self.target, self.model.bands)),
+            priors=prior_sentences(self.model, self.assumptions),
+            hubble=hubble_expectation(self.target, self.assumptions),
+        )  # fmt: skip
 
 
 def _why_not(solved: Solved) -> str | None:
@@ -120,23 +138,28 @@ def _redshift_error(solved: Solved, target: Target) -> float | None:
     return LARGEST_FIT_ERROR if other is None else abs(float(other.mean[0] - solved.mean[0]))
 
 
-def _estimate(curve: LightCurve, target: Target, solved: Solved, h0: float) -> Estimate:
+def _error_outside(solved: Solved, lines: Sequence[BudgetLine]) -> float:
+    """What the budget holds beyond the covariance of the fit, mag."""
+    return math.sqrt(max(total_error(lines) ** 2 - float(solved.cov[0, 0]), 0.0))
+
+
+def _estimate(context: _Context, solved: Solved) -> Estimate:
+    target, assumptions = context.target, context.assumptions
     mu, e, t_max, dm15 = (float(value) for value in solved.mean)
     _, e_err, t_err, dm15_err = (float(value) for value in solved.err)
-    if solved.system.points.mjd.min() > t_max:
-        t_err = math.hypot(t_err, NO_RISE_T_MAX_ERROR_D * (1.0 + solved.data.z))
     why = _why_not(solved)
-    estimate = Estimate(
-        target=target.name, kind="type_ia", mu=None, mu_err=None, mu_err_fit=None,
-        t_max=t_max, t_max_err=t_err,
-        dm15=dm15, dm15_err=dm15_err, e_host=e, e_host_err=e_err, chi2=solved.chi2, n=len(solved.system),
-        verdict=why or "μ stands", scale=_scale(h0), warnings=cautions(curve, target, solved),
-        curves=fit_curves(solved), points=fit_points(solved), peak_mag=peak_mags(solved),
+    lines = budget(solved, target, _redshift_error(solved, target))
+    whole = total_error(lines)
+    estimate = replace(
+        context.estimate(why or "μ stands"), t_max=t_max, t_max_err=t_err, dm15=dm15, dm15_err=dm15_err, e_host=e,
+        e_host_err=e_err, chi2=solved.chi2, n=len(solved.system),
+        warnings=cautions(context.curve, target, solved, whole), curves=fit_curves(solved), points=fit_points(solved),
+        peak_mag=peak_mags(solved), offsets=source_offsets(solved),
     )  # fmt: skip
     if why is not None:
         return estimate
-    lines = budget(solved, target, _redshift_error(solved, target))
-    whole = total_error(lines)
     without_grey = total_error(line for line in lines if line.component != "intrinsic scatter")
-    shifted = mu + h0_magnitude_shift(h0, MODEL_H0)
-    return replace(estimate, mu=shifted, mu_err=whole, mu_err_fit=without_grey, budget=lines)
+    return replace(
+        estimate, mu=mu + assumptions.shift_mag, mu_err=whole, mu_err_fit=without_grey, budget=lines,
+        posterior=posterior(solved, assumptions.shift_mag, _error_outside(solved, lines)),
+    )  # fmt: skip

@@ -23,7 +23,7 @@ def star_points(solution: StandardSolution, sequence: Sequence) -> tuple[Point, 
             mags, errs = frame.mag[:, system.radius], frame.mag_err[:, system.radius]
             for k in np.flatnonzero(np.isfinite(mags)):
                 known = bool(np.isfinite(colour[k]))
-                natural = float(mags[k]) + solved.zp_mag
+                natural = float(mags[k]) + solved.zp_mag + float(solved.star_shift_mag[k])
                 mag = natural + (solved.coefficient * float(colour[k]) if known else 0.0)
                 flux = 10 ** (-0.4 * (mag - FLUX_ZERO_POINT))
                 flux_err = flux * float(errs[k]) * np.log(10) / 2.5

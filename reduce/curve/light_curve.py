@@ -33,4 +33,7 @@ def to_light_curve(points: Iterable[Point]) -> LightCurve:
         flux=column(point.flux for point in taken),
         flux_err=column(point.flux_err for point in taken),
         night=np.array([point.zp_group or point.night for point in taken], dtype=np.str_),
+        source=np.array([point.source for point in taken], dtype=np.str_),
+        by_colour_terms=np.array([not point.passbands_known for point in taken], dtype=bool),
+        bjd_tdb=column(point.bjd_tdb for point in taken),
     )

@@ -8,7 +8,8 @@
     nightly means of comparison stars scatter (flat field, image shape) and an inexact position.
 ``err_band``
     shared by all nights of a band: the comparison sequence (at least `SEQUENCE_FLOOR_MAG`), the colour term
-    where the target is not as red as the comparison stars, and a spectrum that is no star's.
+    where the target is not as red as the comparison stars, a spectrum that is no star's, and what may be left of
+    the host's light. Of a limit, the last is part of the flux's error.
 """
 
 from __future__ import annotations
@@ -22,7 +23,7 @@ from reduce.almanac.times import bjd_tdb
 from reduce.curve.colours import fill_colours
 from reduce.curve.limits import is_detection, magnitude, magnitude_err
 from reduce.curve.visits import Shot, Visit, shots_of, visits_of
-from reduce.records import Choices, Point, PointState, Target
+from reduce.records import Choices, HostLight, HostMethod, Point, PointState, Target
 from reduce.settings import Site
 from reduce.standard.colour import UNKNOWN_COLOUR_ERR
 from reduce.standard.solve import StandardSolution
@@ -81,7 +82,7 @@ class _PointMaker:
 
     def __init__(self, visit: Visit, target: Target, choices: Choices, passband: Mapping[str, float]) -> None:
         self.visit = visit
-        self.host_method = "bent annulus" if target.host_arcsec is not None else "annulus"
+        self.as_measured: HostMethod = "bent annulus" if target.host_arcsec is not None else "annulus"
         system, term = visit.system, visit.system.term
         self.known = bool(np.isfinite(visit.colour))
         self.colour = visit.colour if self.known else float(np.nan_to_num(term.colour_mean))
@@ -117,8 +118,12 @@ class _PointMaker:
         file: str | None,
         flags: tuple[str, ...],
         n_frames: int,
+        host: HostLight | None,
+        common_err: float,
     ) -> Point:
-        seen = is_detection(flux, flux_err)
+        seen = is_detection(flux, float(np.hypot(flux_err, common_err)))
+        if not seen:
+            flux_err = float(np.hypot(flux_err, common_err))
         if not seen and state == "kept":
             state = "limit"
         if self.excluded:
@@ -135,12 +140,12 @@ class _PointMaker:
             mag=magnitude(flux) if seen else None,
             err=magnitude_err(flux, flux_err) if seen else None,
             err_night=self._err_night(zero_point_err),
-            err_band=self.err_band,
+            err_band=float(np.hypot(self.err_band, magnitude_err(flux, common_err))) if seen else self.err_band,
             flux=flux,
             flux_err=flux_err,
             state=state,
             flags=flags,
-            host_method=self.host_method,
+            host_method=host.method if host is not None else self.as_measured,
             zp_group=f"{self.visit.system.camera}/{self.visit.band}/{self.visit.night}",
             n_frames=n_frames,
             natural_mag=magnitude(natural_flux) if seen and natural_flux > 0 else None,
@@ -159,21 +164,25 @@ class _PointMaker:
             file=shot.frame.stars.frame,
             flags=shot.flags,
             n_frames=1,
+            host=shot.host,
+            common_err=shot.common_err * bend,
         )
 
     def night(self) -> Point:
         """Point of all chosen frames together."""
         visit = self.visit
-        mean = visit.mean(self.colour)
+        mean, natural = visit.mean(self.colour), visit.mean(0.0)
         zero_point_errs = np.array([shot.frame.zp_err_mag for shot in visit.chosen])
         return self._point(
             flux=mean.flux,
             flux_err=mean.flux_err,
-            natural_flux=visit.mean(0.0).flux,
+            natural_flux=natural.flux,
             state=visit.state,
             zero_point_err=float(np.sqrt(np.sum((mean.weight * zero_point_errs) ** 2))),
             mjd=visit.mjd,
             file=None,
             flags=tuple(sorted({flag for shot in visit.chosen for flag in shot.flags})),
             n_frames=len(visit.chosen),
+            host=visit.chosen[0].host,
+            common_err=visit.common_err * mean.flux / natural.flux if natural.flux > 0 else visit.common_err,
         )

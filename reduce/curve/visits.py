@@ -9,18 +9,29 @@ import numpy as np
 
 from reduce.curve.combine import Combined, combine, expected_errors
 from reduce.curve.limits import MAG_PER_RELATIVE_FLUX, is_detection, magnitude, magnitude_err
-from reduce.records import FLUX_ZERO_POINT, Floats, PointState, StarFlag, TargetKind
+from reduce.records import (
+    FLUX_ZERO_POINT,
+    PSF_COLUMN,
+    Floats,
+    HostLight,
+    HostMethod,
+    PointState,
+    StarFlag,
+    TargetKind,
+)
 from reduce.standard.solve import BandSystem, SolvedFrame, StandardSolution
 
-COMBINE_WITHIN_D: dict[TargetKind, float] = {"type_ia": 1.0, "cepheid": 0.04, "rr_lyrae": 0.004, "other": 1.0}
-"""Frames within this span make one point: a night, or 2 % of a short period (2 d and 0.2 d)."""
+COMBINE_WITHIN_D: dict[TargetKind, float] = {"type_ia": 1.0, "cepheid": 0.02, "rr_lyrae": 0.004, "other": 1.0}
+"""Frames within this span make one point: a night, or 2 % of a short period (1 d and 0.2 d)."""
 
 _FLAG_WORDS = {
     StarFlag.SATURATED: "saturated", StarFlag.BAD_PIXEL: "bad pixel", StarFlag.EDGE: "edge",
     StarFlag.CROWDED: "crowded", StarFlag.COSMIC_RAY: "cosmic ray", StarFlag.NON_LINEAR: "non-linear",
+    StarFlag.TRAIL: "satellite trail", StarFlag.RESIDUAL_IMAGE: "residual image",
 }  # fmt: skip
-_DROPPING = StarFlag.SATURATED | StarFlag.EDGE
-_DOUBTING = StarFlag.BAD_PIXEL | StarFlag.COSMIC_RAY | StarFlag.NON_LINEAR
+_SURER: tuple[HostMethod, ...] = ("annulus", "bent annulus", "mirrored", "reference")
+_DROPPING = StarFlag.SATURATED | StarFlag.EDGE | StarFlag.TRAIL
+_DOUBTING = StarFlag.BAD_PIXEL | StarFlag.COSMIC_RAY | StarFlag.NON_LINEAR | StarFlag.RESIDUAL_IMAGE
 
 
 @dataclass(frozen=True, slots=True)
@@ -40,6 +51,10 @@ class Shot:
     state: PointState
     """kept, doubtful or dropped."""
     flags: tuple[str, ...]
+    host: HostLight | None = None
+    """How it was freed of its host's light; None: as measured on the frame."""
+    common_err: float = 0.0
+    """Error from the host's light that all frames of the band share."""
 
     @property
     def whole_err(self) -> float:
@@ -86,6 +101,11 @@ class Visit:
         return self.mean(0.0).weight
 
     @property
+    def common_err(self) -> float:
+        """Error of the mean flux (natural system) from the host's light, shared by all nights."""
+        return float(np.sum(self.weight * np.array([shot.common_err for shot in self.chosen])))
+
+    @property
     def mjd(self) -> float:
         """Weighted mid-time."""
         return float(np.sum(self.weight * np.array([shot.frame.stars.mjd for shot in self.chosen])))
@@ -118,7 +138,11 @@ def shots_of(solution: StandardSolution) -> list[Shot]:
 
 def _shot(name: str, row: int, system: BandSystem, frame: SolvedFrame) -> Shot:
     stars = frame.stars
-    per_electron = 10 ** (-0.4 * (frame.zp_mag - FLUX_ZERO_POINT)) / stars.exposure_s
+    zp_mag = frame.zp_mag + float(frame.target_shift_mag[row])
+    per_electron = 10 ** (-0.4 * (zp_mag - FLUX_ZERO_POINT)) / stars.exposure_s
+    host = stars.target_host[row] if stars.target_host else None
+    if host is not None and host.method == "bent annulus" and system.radius != PSF_COLUMN:
+        host = None  # its error was found for the PSF alone
     bits = StarFlag(int(stars.target_flags[row, system.radius]))
     state: PointState = frame.verdict.state
     if bits & _DROPPING:
@@ -132,10 +156,19 @@ def _shot(name: str, row: int, system: BandSystem, frame: SolvedFrame) -> Shot:
         flux=float(stars.target_flux_e[row, system.radius]) * per_electron,
         flux_err=float(stars.target_flux_err_e[row, system.radius]) * per_electron,
         photons_per_flux=1.0 / per_electron,
-        relative_err=float(np.hypot(stars.quality.scintillation, system.frame_scatter_mag / MAG_PER_RELATIVE_FLUX)),
+        relative_err=_relative_err(row, system, frame),
         state=state,
         flags=tuple(word for flag, word in _FLAG_WORDS.items() if bits & flag),
+        host=host,
+        common_err=host.common_err_e * per_electron if host is not None else 0.0,
     )
+
+
+def _relative_err(row: int, system: BandSystem, frame: SolvedFrame) -> float:
+    """Scintillation, what single stars scatter (of all frames, or more of this one), and the plane of the frame."""
+    scatter = max(system.frame_scatter_mag, frame.scatter_mag)
+    mag = np.hypot(scatter, float(frame.target_shift_err_mag[row]))
+    return float(np.hypot(frame.stars.quality.scintillation, mag / MAG_PER_RELATIVE_FLUX))
 
 
 def visits_of(shots: Iterable[Shot], kind: TargetKind) -> list[Visit]:
@@ -155,12 +188,18 @@ def visits_of(shots: Iterable[Shot], kind: TargetKind) -> list[Visit]:
     return visits
 
 
+def _of_one_method(shots: list[Shot]) -> tuple[Shot, ...]:
+    """Those freed of the host in the surest way: a mean of two ways would be off by part of the host."""
+    ranks = [_SURER.index(shot.host.method) if shot.host is not None else 0 for shot in shots]
+    return tuple(shot for shot, rank in zip(shots, ranks, strict=True) if rank == max(ranks))
+
+
 def _visit(shots: list[Shot]) -> Visit:
     chosen: tuple[Shot, ...] = ()
     state: PointState = "dropped"
     candidates: tuple[PointState, ...] = ("kept", "doubtful")
     for wanted in candidates:
-        chosen = tuple(shot for shot in shots if shot.state == wanted)
+        chosen = _of_one_method([shot for shot in shots if shot.state == wanted])
         if chosen:
             state = wanted
             break

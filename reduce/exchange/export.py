@@ -16,6 +16,7 @@ from reduce.plain_text import PlainError, clean_text
 from reduce.records import Point, Target
 
 ExportFormat = Literal["ecsv", "csv"]
+EXPORT_KEYS = (*POINT_KEYS, "source")
 FORMULA_STARTS = ("=", "+", "-", "@", "\t", "\r")
 
 
@@ -48,6 +49,7 @@ _COLUMNS: Mapping[str, _Column] = {
     "host_method": _Column(str, "", "how the light of the host galaxy was taken off"),
     "zp_group": _Column(str, "", "camera/band/night that share a zero point"),
     "provisional": _Column(bool, "", "true: the frames wait for better masters"),
+    "source": _Column(str, "", "the other observatory that measured it; empty: own"),
 }
 
 
@@ -58,7 +60,7 @@ def write_points(
     format: ExportFormat = "ecsv",
     meta: Mapping[str, Any] | None = None,
 ) -> int:
-    """Write points; the columns are those of `reduce.exchange.point_json.POINT_KEYS`.
+    """Write points; the columns are those of `reduce.exchange.point_json.POINT_KEYS`, and ``source``.
 
     Parameters
     ----------
@@ -89,18 +91,17 @@ def write_points(
 
 def _cells(point: Point) -> dict[str, Any]:
     """Values of one row; text is cleaned, unknown numbers are None."""
-    row = point_to_json(point)
-    row["flags"] = " ".join(point.flags)
+    row = point_to_json(point) | {"flags": " ".join(point.flags), "source": point.source}
     return {
         key: clean_text("" if row[key] is None else row[key]) if _COLUMNS[key].kind is str else row[key]
-        for key in POINT_KEYS
+        for key in EXPORT_KEYS
     }
 
 
 def _csv(points: Sequence[Point]) -> str:
     stream = io.StringIO()
     writer = csv.writer(stream, lineterminator="\n")
-    writer.writerow(POINT_KEYS)
+    writer.writerow(EXPORT_KEYS)
     for point in points:
         writer.writerow([_csv_cell(value) for value in _cells(point).values()])
     return stream.getvalue()
@@ -124,7 +125,7 @@ def _ecsv(points: Sequence[Point], target: Target | None, meta: Mapping[str, Any
         if row["star"].startswith("#"):  # a line that begins with it would be read as a comment
             row["star"] = f"'{row['star']}"
     table = Table(masked=False)
-    for key in POINT_KEYS:
+    for key in EXPORT_KEYS:
         column = _COLUMNS[key]
         values = [row[key] for row in rows]
         missing = [value is None for value in values]

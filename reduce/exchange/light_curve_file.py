@@ -1,8 +1,9 @@
 """Light curves from a CSV file: one object or many, one point a line.
 
 Columns ``name, mjd, band, mag, err, z, ebv_mw``; optional ``flux, flux_err`` (zero point 25), ``err_night``
-and ``err_band`` (mag). An empty ``z`` or ``ebv_mw`` means unknown; a line without ``mag`` is a limit and
-needs a flux. Other columns are ignored, and so are empty lines and lines that start with ``#``.
+and ``err_band`` (mag), ``bjd_tdb``, ``kind`` (type_ia where it is not given), ``metallicity_dex, metallicity_err`` and
+``relation``. An empty ``z`` or ``ebv_mw`` means unknown; a line without ``mag`` is a limit and needs a flux. Other
+columns are ignored, and so are empty lines and lines that start with ``#``.
 """
 
 from __future__ import annotations
@@ -12,16 +13,18 @@ import math
 from collections.abc import Iterator
 from dataclasses import dataclass, field
 from pathlib import Path
+from typing import get_args
 
 import numpy as np
 
 from reduce.plain_text import PlainError, clean_text
-from reduce.records import FLUX_ZERO_POINT, LightCurve, Target
+from reduce.records import FLUX_ZERO_POINT, LightCurve, Target, TargetKind
 
 REQUIRED = ("name", "mjd", "band", "mag", "err", "z", "ebv_mw")
 MAG_PER_RELATIVE_FLUX = 2.5 / math.log(10.0)
 MJD_RANGE = (0.0, 200000.0)
 """A larger number is a Julian date, not a modified one."""
+JD_RANGE = (2400000.0, 2600000.0)
 
 
 class LightCurveFileError(PlainError, ValueError):
@@ -62,10 +65,11 @@ class _Line:
 
 @dataclass(slots=True)
 class _Object:
-    z: float | None
-    ebv_mw: float | None
+    facts: Target
     rows: list[tuple[float, ...]] = field(default_factory=list)
     bands: list[str] = field(default_factory=list)
+    sources: list[str] = field(default_factory=list)
+    by_colour_terms: list[bool] = field(default_factory=list)
 
 
 def _lines(path: Path) -> Iterator[_Line]:
@@ -104,7 +108,7 @@ def _check_header(name: str, header: list[str]) -> None:
 
 
 def _point(line: _Line) -> tuple[float, ...]:
-    """mjd, mag, err, err_night, err_band, flux, flux_err; NaN where unknown."""
+    """mjd, mag, err, err_night, err_band, flux, flux_err, bjd_tdb; NaN where unknown."""
     if (line.number("mjd", -math.inf, math.inf) or 0.0) > MJD_RANGE[1]:
         raise line.error("mjd", "this looks like a Julian date, subtract 2400000.5")
     mjd = line.needed("mjd", *MJD_RANGE)
@@ -122,15 +126,22 @@ def _point(line: _Line) -> tuple[float, ...]:
         flux = 10.0 ** (-0.4 * (mag - FLUX_ZERO_POINT))
         flux_err = flux * err / MAG_PER_RELATIVE_FLUX
     night, band = line.number("err_night", 0.0, 100.0), line.number("err_band", 0.0, 100.0)
-    values = (mag, err if mag is not None else None, night or 0.0, band, flux, flux_err)
+    bjd = line.number("bjd_tdb", *JD_RANGE)
+    values = (mag, err if mag is not None else None, night or 0.0, band, flux, flux_err, bjd)
     return (mjd, *(math.nan if value is None else value for value in values))
+
+
+def _by_colour_terms(line: _Line) -> bool:
+    word = line.cells.get("passbands", "")
+    if word not in ("", "known", "unknown"):
+        raise line.error("passbands", f"{clean_text(word, 40)!r} is neither known nor unknown")
+    return word == "unknown"
 
 
 def read_light_curves(path: Path) -> list[tuple[Target, LightCurve]]:
     """Targets and light curves of a CSV file, in the order in which the objects first appear.
 
-    Positions are not in the file and are NaN; every object is taken as a type Ia supernova. The night of a
-    point is the whole part of its MJD.
+    Positions are not in the file and are NaN. The night of a point is the whole part of its MJD.
 
     Raises
     ------
@@ -144,24 +155,37 @@ def read_light_curves(path: Path) -> list[tuple[Target, LightCurve]]:
             raise line.error("name", "the cell is empty")
         if not line.cells["band"]:
             raise line.error("band", "the cell is empty")
-        z, ebv_mw = line.number("z", -0.01, 20.0), line.number("ebv_mw", 0.0, 100.0)
-        known = objects.setdefault(name, _Object(z, ebv_mw))
-        if known.z != z:
-            raise line.error("z", f"differs from the earlier lines of {name}")
-        if known.ebv_mw != ebv_mw:
-            raise line.error("ebv_mw", f"differs from the earlier lines of {name}")
+        facts = _target(name, line)
+        known = objects.setdefault(name, _Object(facts))
+        for column in ("z", "ebv_mw", "kind", "metallicity_dex", "metallicity_err", "relation"):
+            if getattr(known.facts, column) != getattr(facts, column):
+                raise line.error(column, f"differs from the earlier lines of {name}")
         known.rows.append(_point(line))
         known.bands.append(clean_text(line.cells["band"], 40))
+        known.sources.append(clean_text(line.cells.get("source", ""), 40))
+        known.by_colour_terms.append(_by_colour_terms(line))
     if not objects:
         raise LightCurveFileError(f"{clean_text(path)} holds no points; add lines below a header {','.join(REQUIRED)}.")
-    return [(_target(name, thing), _light_curve(thing)) for name, thing in objects.items()]
+    return [(thing.facts, _light_curve(thing)) for thing in objects.values()]
 
 
-def _target(name: str, thing: _Object) -> Target:
-    return Target(name, "type_ia", math.nan, math.nan, z=thing.z, ebv_mw=thing.ebv_mw)
+def _target(name: str, line: _Line) -> Target:
+    kind = line.cells.get("kind") or "type_ia"
+    if kind not in get_args(TargetKind):
+        raise line.error("kind", f"{clean_text(kind, 40)!r} is not one of {', '.join(get_args(TargetKind))}")
+    return Target(
+        name, kind, math.nan, math.nan,  # type: ignore[arg-type]
+        z=line.number("z", -0.01, 20.0), ebv_mw=line.number("ebv_mw", 0.0, 100.0),
+        metallicity_dex=line.number("metallicity_dex", -4.0, 1.5),
+        metallicity_err=line.number("metallicity_err", 0.0, 3.0),
+        relation=clean_text(line.cells.get("relation", ""), 60) or None,
+    )  # fmt: skip
 
 
 def _light_curve(thing: _Object) -> LightCurve:
-    mjd, mag, err, err_night, err_band, flux, flux_err = np.array(thing.rows, float).T
+    mjd, mag, err, err_night, err_band, flux, flux_err, bjd = np.array(thing.rows, float).T
     night = np.array([str(math.floor(time)) for time in mjd])
-    return LightCurve(mjd, np.array(thing.bands), mag, err, err_night, err_band, flux, flux_err, night)
+    return LightCurve(
+        mjd, np.array(thing.bands), mag, err, err_night, err_band, flux, flux_err, night, bjd,
+        source=np.array(thing.sources), by_colour_terms=np.array(thing.by_colour_terms),
+    )  # fmt: skip

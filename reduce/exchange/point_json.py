@@ -18,8 +18,14 @@ POINT_KEYS = (
 
 ESTIMATE_KEYS = (
     "name", "mu", "mu_err", "mu_err_fit", "t_max", "t_max_err", "dm15", "dm15_err", "e_host", "e_host_err", "chi2",
-    "n", "warnings", "kind", "verdict", "scale", "budget", "peak_mag",
+    "n", "warnings", "kind", "verdict", "scale", "budget", "peak_mag", "posterior", "priors", "offsets", "hubble",
+    "distance_mpc",
 )  # fmt: skip
+
+PULSATION_KEYS = (
+    "period_d", "period_err_d", "mode", "epoch_bjd", "coverage", "aliases", "means", "moduli", "relation", "provenance",
+)  # fmt: skip
+"""They follow the others in every estimate: null (lists empty) for a target that does not pulsate."""
 
 
 def without_nan(value: Any) -> Any:
@@ -41,6 +47,8 @@ def point_to_json(point: Point) -> dict[str, Any]:
 
 
 def estimate_to_json(estimate: Estimate) -> dict[str, Any]:
-    """The keys of ESTIMATE_KEYS; warnings and budget are lists of objects, curves and points are left out."""
+    """The keys of ESTIMATE_KEYS and PULSATION_KEYS; lists hold objects, curves and points are left out."""
     row = {"name": estimate.target, **asdict(estimate)}
-    return {key: without_nan(row[key]) for key in ESTIMATE_KEYS}
+    pulsation = row["pulsation"] or {"aliases": [], "means": [], "moduli": []}
+    own = {key: without_nan(row[key]) for key in ESTIMATE_KEYS}
+    return own | {key: without_nan(pulsation.get(key)) for key in PULSATION_KEYS}

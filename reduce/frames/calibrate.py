@@ -5,9 +5,10 @@ from __future__ import annotations
 import numpy as np
 
 from reduce.frames.combine import MAD_TO_SIGMA
-from reduce.frames.detector import DIGITISATION_ADU, saturation_level
+from reduce.frames.detector import DIGITISATION_ADU, converter_step_adu, saturation_level, stated_value
+from reduce.frames.fringe import fringe_strength
+from reduce.frames.master_pixels import dark_factor, master_for, pedestal_adu, why_not_scaled
 from reduce.frames.master_sets import ChosenMasters, Master, same_exposure
-from reduce.frames.masters import dark_factor, pedestal_adu, read_master
 from reduce.records import CalibratedImage, FrameError, FrameInfo, Image, Mask, PixelFlag
 from reduce.settings import Settings
 
@@ -18,7 +19,15 @@ OWN_DARK_SIGMA = 5.0
 """A pixel that stands out of the dark by so much has a dark current of its own; all others share the typical one."""
 
 
-def calibrate(adu: Image, info: FrameInfo, chosen: ChosenMasters, settings: Settings) -> CalibratedImage:
+def calibrate(
+    adu: Image,
+    info: FrameInfo,
+    chosen: ChosenMasters,
+    settings: Settings,
+    *,
+    overscan_adu: Image | None = None,
+    relative_gain: Image | None = None,
+) -> CalibratedImage:
     """A raw image in electrons, with mask and variance; pure but for reading the masters.
 
     Parameters
@@ -26,17 +35,22 @@ def calibrate(adu: Image, info: FrameInfo, chosen: ChosenMasters, settings: Sett
     adu
         (ny, nx) raw counts.
     info
-        Of the same frame; its gain, read noise and saturation win over the settings'.
+        Of the same frame; its gain, read noise and saturation win over the settings' unless these override it.
     chosen
         From `choose_masters`.
+    overscan_adu, relative_gain
+        (ny, nx) level of the overscan, and gain of each pixel's amplifier over the frame's; None where there is none.
 
     Raises
     ------
     FrameError
-        Gain or read noise is stated nowhere.
+        Gain or read noise is stated nowhere, and no flats tell.
     """
-    gain = _stated(info.gain_e_per_adu, settings.camera.gain_e_per_adu, "gain", "gain_e_per_adu")
-    read_noise_e = _stated(info.read_noise_e, settings.camera.read_noise_e, "read noise", "read_noise_e")
+    mine, camera = chosen.flat.detector if chosen.flat is not None else None, settings.camera
+    stated = stated_value(info.gain_e_per_adu, camera.gain_e_per_adu, settings)
+    gain = _known(stated, mine.gain_e_per_adu if mine is not None else None, "gain", "gain_e_per_adu")
+    stated = stated_value(info.read_noise_e, camera.read_noise_e, settings)
+    read_noise_e = _known(stated, mine.read_noise_e if mine is not None else None, "read noise", "read_noise_e")
     saturation_adu, note = saturation_level(info, settings, adu)
     notes = [*chosen.notes, *([note] if note else [])]
 
@@ -44,42 +58,58 @@ def calibrate(adu: Image, info: FrameInfo, chosen: ChosenMasters, settings: Sett
     mask[adu >= saturation_adu] |= np.uint8(PixelFlag.SATURATED)
     mask[~np.isfinite(adu)] |= np.uint8(PixelFlag.NOT_FINITE)
 
-    pedestal: Image | np.float32 = np.float32(0.0)
+    level: Image | np.float32 = np.float32(info.pedestal_adu or 0.0)
     if chosen.bias is not None or chosen.dark is not None:
-        pedestal = pedestal_adu(chosen, info.exposure_s)
-    else:
+        level = pedestal_adu(chosen, info)
+        if unscaled := why_not_scaled(chosen, info):
+            notes.append(unscaled)
+    elif not info.calibrated and info.pedestal_adu is None and overscan_adu is None:
         notes.append(
             "neither bias nor dark was subtracted: sky and its noise are overestimated by the camera's offset."
         )
-    data = (adu - pedestal) * np.float32(gain)
+    if overscan_adu is not None:
+        level = level + overscan_adu
+    data = (adu - level) * np.float32(gain)
     variance = _dark_e(info, chosen, settings, gain, mask, notes)
-    variance += np.float32(read_noise_e**2 + (gain * DIGITISATION_ADU) ** 2)
+    step_e = gain * converter_step_adu(adu) * DIGITISATION_ADU
+    variance += np.float32(read_noise_e**2 + step_e**2)
     variance += np.float32(_masters_variance_e2(info, chosen, gain, read_noise_e))
+    if relative_gain is not None:
+        data *= relative_gain
 
+    if chosen.shutter is not None and info.exposure_s:
+        data /= np.float32(1.0) + master_for(chosen.shutter, info) / np.float32(info.exposure_s)
     relative_flat_error = 0.0
+    flat: Image | None = None
     if chosen.flat is not None:
-        flat = read_master(chosen.flat.path)
+        flat = master_for(chosen.flat, info)
         bad = ~((flat >= LEAST_FLAT) & (flat <= MOST_FLAT))
         mask[bad] |= np.uint8(PixelFlag.BAD)
         flat = np.where(bad, np.float32(1.0), flat)
         data /= flat
         variance /= flat**2
         relative_flat_error = chosen.flat.noise or 0.0
+    if chosen.fringe is not None:
+        pattern = master_for(chosen.fringe, info)
+        strength_e = fringe_strength(data, mask, pattern)
+        data -= np.float32(strength_e) * pattern
+        notes.append(f"fringes of {float(np.std(pattern)) * abs(strength_e):.1f} e- rms were subtracted.")
     return CalibratedImage(
         data_e=data,
         variance_e2=variance,
         mask=mask,
-        flat_used=chosen.flat is not None,
+        flat_used=chosen.flat is not None or "flat" in info.calibrated,
         gain_e_per_adu=gain,
         read_noise_e=read_noise_e,
-        saturation_e=(saturation_adu - float(np.nanmedian(pedestal))) * gain,
+        saturation_e=(saturation_adu - float(np.nanmedian(level))) * gain,
         relative_flat_error=relative_flat_error,
+        sensitivity=flat,
         notes=tuple(notes),
     )
 
 
-def _stated(header: float | None, setting: float | None, name: str, key: str) -> float:
-    value = header if header is not None else setting
+def _known(stated: float | None, measured: float | None, name: str, key: str) -> float:
+    value = measured if stated is None else stated
     if value is None:
         raise FrameError(f"the {name} is not known; write {key} under [camera] in observatory.toml.")
     return value
@@ -98,8 +128,8 @@ def _dark_e(
         if rate is None:
             notes.append("the dark current is not known and was left out of the noise.")
         return np.full(mask.shape, (rate or 0.0) * (info.exposure_s or 0.0), np.float32)
-    dark = read_master(chosen.dark.path)
-    signal = dark - read_master(chosen.bias.path) if chosen.bias is not None else dark - np.nanmedian(dark)
+    dark = master_for(chosen.dark, info)
+    signal = dark - master_for(chosen.bias, info) if chosen.bias is not None else dark - np.nanmedian(dark)
     typical = float(np.nanmedian(signal))
     above = signal - np.float32(typical)
     sigma = MAD_TO_SIGMA * float(np.nanmedian(np.abs(above)))
@@ -115,7 +145,7 @@ def _dark_e(
 def _masters_variance_e2(info: FrameInfo, chosen: ChosenMasters, gain: float, read_noise_e: float) -> float:
     """Noise that subtracting the masters adds to each pixel, e-²."""
     factor = dark_factor(chosen, info.exposure_s)
-    dark_weight = factor if chosen.dark is not None else 0.0
+    dark_weight = factor if chosen.dark is not None and not why_not_scaled(chosen, info) else 0.0
     bias_weight = 1.0 - dark_weight if chosen.dark is None or not _exact(info, chosen) else 0.0
     total = 0.0
     for master, weight in ((chosen.bias, bias_weight), (chosen.dark, dark_weight)):

@@ -16,6 +16,9 @@ DIGITISATION_ADU = 1.0 / math.sqrt(12.0)
 LARGEST_16_BIT = 65535.0
 CONVERTER_TOPS_ADU = (4095.0, 16383.0, 32767.0, 65520.0, 65532.0, 65535.0)
 """Largest numbers of converters of 12, 14, 15 and 16 bits, and of 12 and 14 bits stored as 16."""
+STORED_STEPS = (2, 4, 8, 16, 32, 64)
+LEAST_NUMBERS = 8
+"""Different numbers in a frame from which their common step says something."""
 PILED_PIXELS = 3
 """So many pixels with exactly the highest value of a frame do not happen to real light that is far above the sky."""
 FAR_ABOVE_SKY_ADU = 1000.0
@@ -60,6 +63,25 @@ def pair_statistics(first: ArrayLike, second: ArrayLike) -> tuple[tuple[float, f
     return (float(np.median(a)), float(np.median(b))), float(np.std(difference[inside], ddof=1))
 
 
+def converter_step_adu(adu: Image) -> float:
+    """Step between the numbers of a frame: 16 or 4 where those of 12 or 14 bits are stored as 16, mostly 1."""
+    sample = adu[::5, ::5].ravel()
+    sample = sample[np.isfinite(sample)]
+    if len(sample) == 0 or (np.abs(sample) > LARGEST_16_BIT).any() or (sample != np.rint(sample)).any():
+        return 1.0
+    whole = np.unique(sample.astype(np.int64))
+    if len(whole) < LEAST_NUMBERS:
+        return 1.0
+    step = int(np.gcd.reduce(np.diff(whole)))
+    return float(step) if step in STORED_STEPS else 1.0
+
+
+def stated_value(header: float | None, setting: float | None, settings: Settings) -> float | None:
+    """What a header or the settings say; the header wins unless the observer says that it is wrong."""
+    first, second = (setting, header) if settings.camera.overrides_header else (header, setting)
+    return second if first is None else first
+
+
 def converter_top_adu(adu: Image) -> float | None:
     """Highest value of a frame when it is the converter's top and not the light's: ADU, or None."""
     top = float(np.nanmax(adu))
@@ -74,9 +96,11 @@ def saturation_level(info: FrameInfo, settings: Settings, adu: Image | None = No
 
     Where nobody does, the pixels of the frame itself may show the converter's top.
     """
-    stated = info.saturation_adu or settings.camera.saturation_adu
+    stated = stated_value(info.saturation_adu, settings.camera.saturation_adu, settings)
     if stated is not None:
-        return stated, ""
+        last_adu = LARGEST_16_BIT + 1.0 - converter_step_adu(adu) if adu is not None else stated
+        # Of 12 bits stored as 16 the top is 65520: 65535 is never reached.
+        return min(stated, last_adu) if last_adu > 0.9 * stated else stated, ""
     top_adu = converter_top_adu(adu) if adu is not None else None
     if top_adu is not None and top_adu != LARGEST_16_BIT:
         return top_adu, (

@@ -10,6 +10,7 @@ import re
 import tomllib
 from collections.abc import Mapping
 from dataclasses import dataclass
+from fnmatch import fnmatchcase
 from functools import lru_cache
 from importlib.resources import files
 from pathlib import Path
@@ -19,9 +20,10 @@ from reduce.frames.band import band_of
 from reduce.frames.header import Header
 from reduce.frames.observed_time import mid_time
 from reduce.frames.position import position
+from reduce.frames.treated import earlier_steps, pixel_unit
 from reduce.plain_text import clean_text
 from reduce.records import FrameInfo, FrameKind
-from reduce.settings import Settings
+from reduce.settings import Frames, Settings
 
 ARCSEC_PER_RADIAN_MM_PER_UM = 206.264806
 """Arcsec subtended by 1 µm at 1 mm."""
@@ -46,6 +48,7 @@ class Dialect:
     time: Mapping[str, list[str]]
     kinds: Mapping[str, list[str]]
     bands: Mapping[str, Any]
+    calibrated: Mapping[str, list[str]]
 
 
 @lru_cache(maxsize=1)
@@ -84,7 +87,15 @@ def understand(
     words = dialect or built_in_dialect()
     said = list(notes)
     exposure_s = _exposure(header, words, said)
-    kind = _kind(header, words, path, exposure_s, said)
+    kind = _kind(header, words, path, settings.frames, exposure_s, said)
+    calibrated = earlier_steps(header, words.calibrated, said)
+    if calibrated and kind in ("bias", "dark", "flat"):
+        said.append(f"a {kind} that was calibrated before is not used to make a master.")
+        kind = "unknown"
+    physical = pixel_unit(header, words.calibrated).physical
+    if physical:
+        said.append(f"the pixels are in {physical!r}, which no noise can be worked out for; the frame is not used.")
+        kind = "unknown"
     filter_name, band = band_of(header, words.keywords, words.bands, settings.filters, kind, said)
     ra_deg, dec_deg = position(header, words.positions, words.keywords["equinox"], said)
     binning = _binning(header, words)
@@ -115,6 +126,8 @@ def understand(
         temperature_c=temperature_c,
         extension=extension,
         notes=tuple(said),
+        chip=header.first_text(words.keywords["chip"]),
+        calibrated=calibrated,
     )
 
 
@@ -139,7 +152,9 @@ def _letters(text: str) -> str:
     return re.sub(r"[^a-z]", "", text.casefold())
 
 
-def _kind(header: Header, words: Dialect, path: Path, exposure_s: float | None, notes: list[str]) -> FrameKind:
+def _kind(
+    header: Header, words: Dialect, path: Path, stated_by: Frames, exposure_s: float | None, notes: list[str]
+) -> FrameKind:
     meaning = {word: kind for kind, list_ in words.kinds.items() for word in list_}
     kinds: dict[str, FrameKind] = {"light": "light", "bias": "bias", "dark": "dark", "flat": "flat"}
     stated = header.first_text(words.keywords["image_type"])
@@ -156,6 +171,10 @@ def _kind(header: Header, words: Dialect, path: Path, exposure_s: float | None, 
             if kind in name:
                 return kinds[kind]
         notes.append(f"image type {stated!r} is not known; the object's and the file's name were asked.")
+    by_pattern = kind_by_pattern(path, stated_by)
+    if by_pattern is not None:
+        notes.append(f"taken as a {by_pattern} by its place and name, as [frames] in observatory.toml says.")
+        return by_pattern
     hints = [_letters(header.first_text(words.keywords["object_name"]))]
     hints += [_letters(part) for part in re.split(r"[^A-Za-z]+|(?<=[a-z])(?=[A-Z])", path.name.split(".")[0])]
     hints.append(_calibration_word(header.first_text(words.keywords["object_name"])))
@@ -168,6 +187,24 @@ def _kind(header: Header, words: Dialect, path: Path, exposure_s: float | None, 
         return "bias"
     notes.append("taken as a light; the header does not say what kind of frame this is.")
     return "light"
+
+
+def kind_by_pattern(path: Path, stated: Frames) -> FrameKind | None:
+    """The kind whose pattern the file's name, or its folders and name, fit; None when no pattern or several kinds do.
+
+    A pattern without a stroke is one of file names; capitals do not matter; ``*`` also stands for folders.
+    """
+    parts = [part.casefold() for part in path.parts]
+    ends = ["/".join(parts[k:]) for k in range(len(parts))]
+
+    def fits(pattern: str) -> bool:
+        return any(fnmatchcase(end, pattern.casefold()) for end in (ends if "/" in pattern else ends[-1:]))
+
+    kinds: dict[FrameKind, tuple[str, ...]] = {
+        "light": stated.light, "bias": stated.bias, "dark": stated.dark, "flat": stated.flat,
+    }  # fmt: skip
+    found = [kind for kind, patterns in kinds.items() if any(map(fits, patterns))]
+    return found[0] if len(found) == 1 else None
 
 
 def _calibration_word(name: str) -> str:

@@ -19,6 +19,8 @@ class Header:
 
     values: Mapping[str, CardValue]
     comments: Mapping[str, str] = field(default_factory=dict)
+    history: tuple[str, ...] = ()
+    """Lines of HISTORY and COMMENT."""
 
     def __contains__(self, keyword: str) -> bool:
         return self.values.get(keyword) not in (None, "")

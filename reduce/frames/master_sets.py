@@ -1,32 +1,35 @@
-"""Master bias, dark and flat: which frames belong together, and which masters suit a frame; nothing is read here.
+"""Master bias, dark, flat and shutter map: what they are, and which suit a frame; nothing is read here.
 
 A master's digest names its kind, its input frames and the masters used to make it: it never changes once it stands and
-is the same, byte for byte, whoever builds it.
-
-- bias: frames of one camera, size, binning, gain setting and temperature (±2 °C);
-- dark: of one exposure, too; kept with the bias level in it, so that a dark of the light's own exposure needs no bias;
-- flat: of one filter; temperature does not matter.
+is the same, byte for byte, whoever builds it. `master_plans` says which frames make one.
 """
 
 from __future__ import annotations
 
 import hashlib
 import json
-from collections import defaultdict
+import math
 from collections.abc import Iterable, Sequence
 from dataclasses import dataclass
 from pathlib import Path
-from typing import Any, Literal
+from typing import Literal
 
+import numpy as np
+
+from reduce.frames.detector_check import DetectorMeasure
 from reduce.records import FrameInfo
 
-MasterKind = Literal["bias", "dark", "flat"]
+MasterKind = Literal["bias", "dark", "flat", "shutter", "fringe"]
 
-MASTER_VERSION = 1
+MASTER_VERSION = 2
 """Raise it when the same inputs would give other pixels."""
 SAME_TEMPERATURE_C = 2.0
 SAME_EXPOSURE = 0.005
 """Fraction by which exposures of "the same length" may differ, plus 5 ms."""
+ENOUGH_TO_CHOOSE = 5
+"""Frames of a master from which the nearer in time is better than one of more frames (common practice)."""
+SHORT_LIGHT_S, SHORTEST_LIGHT_S = 30.0, 3.0
+"""Below these a shutter of some hundredths of a second is seen, and may spoil a magnitude (common practice)."""
 
 
 @dataclass(frozen=True, slots=True)
@@ -38,19 +41,47 @@ class Signature:
     ny: int
     binning: tuple[int, int]
     gain_e_per_adu: float | None
+    window: tuple[int, int] | None = None
+    """Where on the detector the image begins, as binned, if it is known."""
+    overscan: bool = False
+    """The overscan is subtracted: the level of the bias is gone."""
 
     @classmethod
     def of(cls, info: FrameInfo) -> Signature:
         """Of one frame."""
-        return cls(info.camera, info.nx, info.ny, info.binning, info.gain_e_per_adu)
+        return cls(
+            info.camera, info.nx, info.ny, info.binning, info.gain_e_per_adu, info.window, info.overscan
+        )  # fmt: skip
 
     def suits(self, other: Signature) -> bool:
-        """The same detector read out in the same way; a gain that one side does not state is no obstacle."""
+        """Whether a master of this kind of frame can serve another: the same detector read out in the same way.
+
+        A gain that one side does not state is no obstacle. A subframe is served by a master that covers it, when both
+        say where on the detector they lie.
+        """
+        return self.differs(other) == ""
+
+    def differs(self, other: Signature) -> str:
+        """What keeps a master of this kind of frame from serving another, '' when nothing does."""
         gains = self.gain_e_per_adu, other.gain_e_per_adu
-        same_gain = None in gains or gains[0] == gains[1]
-        return same_gain and (self.camera, self.nx, self.ny, self.binning) == (
-            other.camera, other.nx, other.ny, other.binning,
-        )  # fmt: skip
+        if self.camera != other.camera:
+            return "camera"
+        if self.binning != other.binning:
+            return "binning"
+        if None not in gains and gains[0] != gains[1]:
+            return "gain"
+        if self.overscan != other.overscan:
+            return "overscan"
+        return "" if self.offset(other) is not None else "size"
+
+    def offset(self, other: Signature) -> tuple[int, int] | None:
+        """Column and row of this image where another begins, None when it is not covered."""
+        same_size = (self.nx, self.ny) == (other.nx, other.ny)
+        if self.window is None or other.window is None:
+            return (0, 0) if same_size else None
+        x, y = other.window[0] - self.window[0], other.window[1] - self.window[1]
+        inside = 0 <= x <= self.nx - other.nx and 0 <= y <= self.ny - other.ny
+        return (x, y) if inside else None
 
 
 @dataclass(frozen=True, slots=True)
@@ -75,20 +106,26 @@ class MasterPlan:
     temperature_c: float | None
     """Middle of the inputs'."""
     inputs: tuple[CalibrationFrame, ...]
+    mjd: float | None = None
+    """Middle of the inputs' times."""
 
     @property
     def label(self) -> str:
-        """What a person calls it; unique among plans."""
+        """What a person calls it."""
         what = {
             "bias": "bias",
             "dark": f"dark {self.exposure_s:g} s" if self.exposure_s is not None else "dark",
             "flat": f"flat {self.band or self.filter_name}",
+            "shutter": "shutter map",
+            "fringe": f"fringes {self.band}",
         }[self.kind]
-        cold = f", {self.temperature_c:.0f} °C" if self.temperature_c is not None and self.kind != "flat" else ""
+        by_temperature = self.kind in ("bias", "dark")
+        cold = f", {self.temperature_c:.0f} °C" if self.temperature_c is not None and by_temperature else ""
         one = self.signature
         gain = f", gain {one.gain_e_per_adu:g}" if one.gain_e_per_adu is not None else ""
         size = f"{one.nx}×{one.ny}, binning {one.binning[0]}×{one.binning[1]}{gain}"
-        return f"{what} ({one.camera or 'camera not named'}, {size}{cold})"
+        day = f", {iso_day(self.mjd)}" if self.mjd is not None else ""
+        return f"{what} ({one.camera or 'camera not named'}, {size}{cold}{day})"
 
     def digest(self, lower: Iterable[str]) -> str:
         """Name of the master these inputs and lower masters (digests) make."""
@@ -117,6 +154,10 @@ class Master:
     single_noise: float | None
     """The same of one input frame: of a bias, the read noise."""
     notes: tuple[str, ...] = ()
+    mjd: float | None = None
+    """Middle of the inputs' times."""
+    detector: DetectorMeasure | None = None
+    """What flats say of the detector."""
 
 
 @dataclass(frozen=True, slots=True)
@@ -127,99 +168,92 @@ class ChosenMasters:
     dark: Master | None = None
     flat: Master | None = None
     notes: tuple[str, ...] = ()
+    shutter: Master | None = None
+    """Of a short exposure."""
+    other_dark: Master | None = None
+    """Of another exposure than the dark that is to be scaled: it shows whether the dark does scale."""
+    fringe: Master | None = None
 
     def digests(self) -> list[str | None]:
-        """Of bias, dark and flat."""
-        return [master.digest if master is not None else None for master in (self.bias, self.dark, self.flat)]
+        """Of bias, dark, flat, shutter map, the second dark, and fringes."""
+        all_ = (self.bias, self.dark, self.flat, self.shutter, self.other_dark, self.fringe)
+        return [master.digest if master is not None else None for master in all_]
 
 
-# ---- plan ------------------------------------------------------------------------------------------------
-
-
-def plan_masters(frames: Iterable[tuple[str, Path, FrameInfo]]) -> list[MasterPlan]:
-    """Masters that calibration frames (id, path, info) can make: bias, then dark, then flat; frames of other kinds and
-    copies of a frame are left out. The order of ``frames`` does not matter.
-    """
-    groups: dict[tuple[Any, ...], list[CalibrationFrame]] = defaultdict(list)
-    seen: set[str] = set()
-    for frame in sorted((CalibrationFrame(*row) for row in frames), key=lambda frame: (frame.id, str(frame.path))):
-        if frame.id not in seen and frame.info.kind in ("bias", "dark", "flat"):
-            seen.add(frame.id)
-            groups[_group(frame.info)].append(frame)
-    plans = []
-    for key in sorted(groups, key=repr):
-        by_temperature = [groups[key]] if key[0] == "flat" else _by_temperature(groups[key])
-        plans += [_plan(frames_) for frames_ in by_temperature]
-    order = {"bias": 0, "dark": 1, "flat": 2}
-    return sorted(plans, key=lambda plan: (order[plan.kind], plan.label))
-
-
-def _group(info: FrameInfo) -> tuple[Any, ...]:
-    exposure = round(info.exposure_s, 2) if info.kind == "dark" and info.exposure_s is not None else None
-    filter_name = (info.band or info.filter_name) if info.kind == "flat" else ""
-    return info.kind, Signature.of(info), exposure, filter_name
-
-
-def _by_temperature(frames: Sequence[CalibrationFrame]) -> list[list[CalibrationFrame]]:
-    """Runs of frames that lie within ±2 °C; frames of unknown temperature are one run of their own."""
-    unknown = [frame for frame in frames if frame.info.temperature_c is None]
-    known = sorted(
-        (frame.info.temperature_c, frame.id, frame) for frame in frames if frame.info.temperature_c is not None
-    )
-    runs: list[list[CalibrationFrame]] = [unknown] if unknown else []
-    coldest = float("-inf")
-    for temperature_c, _, frame in known:
-        if temperature_c - coldest > 2 * SAME_TEMPERATURE_C:
-            runs.append([])
-            coldest = temperature_c
-        runs[-1].append(frame)
-    return runs
-
-
-def _plan(frames: Sequence[CalibrationFrame]) -> MasterPlan:
-    first = frames[0].info
-    assert first.kind in ("bias", "dark", "flat")
-    known = [frame.info.temperature_c for frame in frames if frame.info.temperature_c is not None]
-    return MasterPlan(
-        kind=first.kind,
-        signature=Signature.of(first),
-        filter_name=first.filter_name if first.kind == "flat" else "",
-        band=first.band if first.kind == "flat" else None,
-        exposure_s=first.exposure_s if first.kind != "bias" else None,
-        temperature_c=round((min(known) + max(known)) / 2.0, 2) if known else None,
-        inputs=tuple(sorted(frames, key=lambda frame: frame.id)),
-    )
+def iso_day(mjd: float) -> str:
+    """Day of a time in UTC: ``2024-03-11``."""
+    return str(np.datetime64("1858-11-17") + np.timedelta64(math.floor(mjd), "D"))
 
 
 # ---- choose ----------------------------------------------------------------------------------------------
 
 
 def choose_masters(info: FrameInfo, masters: Iterable[Master]) -> ChosenMasters:
-    """The masters that suit a light (or a flat, which gets no flat).
+    """The masters that suit a light (or a flat, which gets no flat, but a shutter map whatever its exposure).
 
-    A dark of the same exposure is taken as it is. One of another exposure is scaled, which needs a bias; the shortest
-    of the longer ones is preferred, as scaling up multiplies its noise. Without a bias a flat takes the shortest dark
-    as it is. Ties go to the nearer temperature, then to more
-    inputs, then to the digest: the order of ``masters`` does not matter.
+    Of masters with enough frames (`ENOUGH_TO_CHOOSE`) the nearest in time is taken, of others the one with most. A dark
+    of the same exposure is taken as it is. One of another exposure is scaled, which needs a bias; the shortest of the
+    longer ones is preferred, as scaling up multiplies its noise. Without a bias a flat takes the shortest dark as it
+    is. A frame with a pedestal was freed of its bias already and gets neither bias nor dark. The order of ``masters``
+    does not matter.
     """
     own = Signature.of(info)
-    ready = sorted(
-        (m for m in masters if m.signature.suits(own)), key=lambda m: (_coldness(info, m), -m.n_inputs, m.digest)
-    )
+    masters = list(masters)
+    ready = sorted((m for m in masters if m.signature.suits(own)), key=lambda m: _rank(info, m))
     cold = [m for m in ready if _coldness(info, m) <= SAME_TEMPERATURE_C]
     notes: list[str] = []
-    bias = next((m for m in cold if m.kind == "bias"), None)
-    if bias is None:
-        notes.append("no bias frames of this camera, size, binning and temperature.")
-    dark = _choose_dark(info, [m for m in cold if m.kind == "dark"], bias, notes)
-    flat = None
+    bias = dark = other = None
+    if info.pedestal_adu is None:
+        bias = next((m for m in cold if m.kind == "bias"), None)
+        if bias is None:
+            notes.append("no bias frames of this camera, size, binning and temperature" + _why(own, "bias", masters))
+        darks = [m for m in cold if m.kind == "dark"]
+        dark = _choose_dark(info, darks, bias, notes)
+        if dark is not None and bias is not None and not same_exposure(dark.exposure_s, info.exposure_s):
+            others = [m for m in darks if m.exposure_s and not same_exposure(m.exposure_s, dark.exposure_s)]
+            other = max(others, key=_length, default=None)
+    flat, shutter = None, _choose_shutter(info, ready, notes)
     if info.kind != "flat":
-        flat = next((m for m in ready if m.kind == "flat" and _same_filter(info, m)), None)
+        of_filter = [m for m in masters if m.kind == "flat" and _same_filter(info, m)]
+        flat = next((m for m in ready if m in of_filter), None)
         if flat is None:
-            notes.append(
-                f"no flats in {info.band or info.filter_name or 'this filter'} of this camera, size and binning."
-            )
-    return ChosenMasters(bias, dark, flat, tuple(notes))
+            name = info.band or info.filter_name or "this filter"
+            notes.append(f"no flats in {name} of this camera, size and binning" + _why(own, "flat", of_filter))
+    fringe = next((m for m in ready if m.kind == "fringe" and _same_filter(info, m) and info.kind == "light"), None)
+    return ChosenMasters(bias, dark, flat, tuple(notes), shutter, other, fringe)
+
+
+def _rank(info: FrameInfo, master: Master) -> tuple[float, float, float, float, int, str]:
+    """Small is better: enough frames, the same whole degree, near in time; then the rest, so that no two are equal."""
+    enough = min(master.n_inputs, ENOUGH_TO_CHOOSE)
+    far_d = 0.0 if info.mjd_mid is None or master.mjd is None else abs(info.mjd_mid - master.mjd)
+    warm_c = _coldness(info, master) if master.kind in ("bias", "dark") else 0.0
+    return -enough, round(warm_c), far_d, warm_c, -master.n_inputs, master.digest
+
+
+def _why(own: Signature, kind: MasterKind, masters: Iterable[Master]) -> str:
+    """What those that stand lack, behind a sentence."""
+    reasons = {m.signature.differs(own): m.signature for m in masters if m.kind == kind}
+    if "binning" in reasons:
+        x, y = reasons["binning"].binning
+        return f"; those there are have binning {x}×{y}."
+    if "overscan" in reasons:
+        return f"; those there are have {'an' if reasons['overscan'].overscan else 'no'} overscan."
+    return "."
+
+
+def _choose_shutter(info: FrameInfo, ready: Sequence[Master], notes: list[str]) -> Master | None:
+    shutter = next((m for m in ready if m.kind == "shutter"), None)
+    if info.kind == "flat":
+        return shutter  # a master's flats may be short and long
+    if not info.exposure_s or info.exposure_s > SHORT_LIGHT_S:
+        return None
+    if shutter is None and info.exposure_s < SHORTEST_LIGHT_S:
+        notes.append(
+            f"exposed for {info.exposure_s:g} s only: the shutter's own time is not corrected without flats of "
+            "short and of long exposure."
+        )
+    return shutter
 
 
 def _coldness(info: FrameInfo, master: Master) -> float:

@@ -1,6 +1,6 @@
 """Masters on disk: built in blocks of rows, never more than one block of all inputs in memory.
 
-Grouping and choosing, which read nothing, are in `master_sets`.
+`master_plans` says which frames make one, `master_sets` which suits a frame; neither reads anything.
 """
 
 from __future__ import annotations
@@ -8,37 +8,30 @@ from __future__ import annotations
 import math
 import os
 import tempfile
-from collections.abc import Callable, Iterable, Mapping
-from functools import lru_cache
+from collections.abc import Iterable, Mapping
+from dataclasses import astuple, replace
 from pathlib import Path
 from typing import Any
 
 import numpy as np
 
 from reduce.frames.combine import combine, typical_sigma
-from reduce.frames.detector import CONVERTER_TOPS_ADU, LARGEST_FULL_SHARE, saturation_level
+from reduce.frames.detector_check import DetectorMeasure
 from reduce.frames.extent import declared_units
-from reduce.frames.master_sets import (
-    ChosenMasters,
-    Master,
-    MasterPlan,
-    choose_masters,
-    same_exposure,
-)
+from reduce.frames.flats import Prepare, choose_flats
+from reduce.frames.fringe import finished, prepare_skies
+from reduce.frames.master_sets import ChosenMasters, Master, MasterPlan, choose_masters
 from reduce.frames.reader import Frame, open_frame
+from reduce.frames.shutter import shutter_map
 from reduce.plain_text import clean_text
 from reduce.records import FrameError, Image
 from reduce.settings import Settings
 
 BLOCK_PIXELS = 4_000_000
 """Pixels of all inputs together that are read at once (16 MB; combining them needs a few times as much)."""
-FLAT_RANGE = (0.10, 0.80)
-"""Levels of a usable flat as fractions of saturation (common practice)."""
-LEVEL_SAMPLE = 250_000
-"""Pixels that the level of a flat is taken from."""
-
-Prepare = Callable[[Image, int, int], Image]
-"""(rows as read, first, end) → rows to combine."""
+OF_LIGHT = ("flat", "shutter")
+UNKNOWN = -1.0
+"""Stands in a master's header for a number that is not known."""
 
 
 def build_master(plan: MasterPlan, masters: Iterable[Master], folder: Path, settings: Settings) -> Master:
@@ -61,7 +54,7 @@ def build_master(plan: MasterPlan, masters: Iterable[Master], folder: Path, sett
         It cannot be made, in one sentence.
     """
     lower = _lower(plan, masters)
-    if plan.kind == "flat" and lower.bias is None and lower.dark is None:
+    if plan.kind in OF_LIGHT and lower.bias is None and lower.dark is None:
         raise FrameError(f"{plan.label} needs bias frames, or darks: take some.")
     digest, path = _named(plan, lower, folder)
     found = _stored(plan, digest, path)
@@ -69,10 +62,20 @@ def build_master(plan: MasterPlan, masters: Iterable[Master], folder: Path, sett
         return found
     frames = [open_frame(frame.path, settings) for frame in plan.inputs]
     notes: list[str] = []
-    prepare: list[Prepare] = [lambda rows, first, end: rows] * len(frames)
-    if plan.kind == "flat":
-        frames, prepare = _flats(plan, frames, lower, settings, notes)
-    data, noise = _combine_streaming(frames, prepare, plan.signature.nx, plan.signature.ny)
+    prepare: list[Prepare] = [_without_overscan(frame) for frame in frames]
+    detector = DetectorMeasure()
+    if plan.kind in OF_LIGHT:
+        frames, prepare, detector = choose_flats(plan, frames, lower, settings, notes)
+    if plan.kind == "fringe":
+        prepare = prepare_skies(frames, lower)
+    noise: float | None
+    if plan.kind == "shutter":
+        notes.clear()
+        data, noise = shutter_map(frames, prepare, notes), None
+    else:
+        data, noise = _combine_streaming(frames, prepare, plan.signature.nx, plan.signature.ny)
+    if plan.kind == "fringe":
+        data = finished(data, None if noise is None else noise / math.sqrt(len(frames)), notes)
     if plan.kind == "flat":
         middle = float(np.nanmedian(data))
         data, noise = (data / np.float32(middle)).astype(np.float32), None if noise is None else noise / middle
@@ -80,7 +83,8 @@ def build_master(plan: MasterPlan, masters: Iterable[Master], folder: Path, sett
         notes.append(f"made of {len(frames)} frame(s): cosmic rays cannot be told from signal.")
     cards = {
         "DIGEST": digest, "NINPUT": len(frames),
-        "SIGMA1": -1.0 if noise is None else noise,
+        "SIGMA1": UNKNOWN if noise is None else noise,
+        **{f"DETECT{k}": UNKNOWN if value is None else value for k, value in enumerate(astuple(detector), 1)},
         **{f"NOTE{k}": _ascii(note) for k, note in enumerate(notes, 1)},
     }  # fmt: skip
     _write(path, data, plan.kind, cards)
@@ -92,7 +96,18 @@ def build_master(plan: MasterPlan, masters: Iterable[Master], folder: Path, sett
 
 def _lower(plan: MasterPlan, masters: Iterable[Master]) -> ChosenMasters:
     """Masters that go into this one."""
-    return choose_masters(plan.inputs[0].info, masters) if plan.kind == "flat" else ChosenMasters()
+    if plan.kind in ("bias", "dark"):
+        return ChosenMasters()
+    lower = choose_masters(replace(plan.inputs[0].info, mjd_mid=plan.mjd), masters)
+    return replace(lower, fringe=None, shutter=None if plan.kind == "shutter" else lower.shutter)
+
+
+def _without_overscan(frame: Frame) -> Prepare:
+    def prepare(rows: Image, first: int, end: int) -> Image:
+        overscan = frame.overscan_rows(first, end)
+        return rows if overscan is None else rows - overscan
+
+    return prepare
 
 
 def _named(plan: MasterPlan, lower: ChosenMasters, folder: Path) -> tuple[str, Path]:
@@ -128,76 +143,6 @@ def _combine_streaming(frames: list[Frame], prepare: list[Prepare], nx: int, ny:
     if not np.isfinite(data).any():
         raise FrameError("the calibration frames hold no number at all; take them again.")
     return data, typical_sigma(variance, len(frames))
-
-
-def _flats(
-    plan: MasterPlan, frames: list[Frame], lower: ChosenMasters, settings: Settings, notes: list[str]
-) -> tuple[list[Frame], list[Prepare]]:
-    """Flats of a usable level, each to be freed of its pedestal and divided by its own level."""
-    kept: list[Frame] = []
-    prepare: list[Prepare] = []
-    levels: list[float] = []
-    for frame in frames:
-        image = frame.read()
-        step = max(1, math.isqrt(image.size // LEVEL_SAMPLE))
-        fraction, lowest = _flat_level(image[::step, ::step], frame, settings)
-        levels.append(fraction)
-        pedestal = pedestal_adu(lower, frame.info.exposure_s)
-        level = float(np.nanmedian((image - pedestal)[::step, ::step]))
-        if lowest <= fraction <= FLAT_RANGE[1] and level > 0:
-            kept.append(frame)
-            prepare.append(_divide(lower, frame.info.exposure_s, level))
-    if not kept:
-        raise FrameError(
-            f"{plan.label}: all {len(frames)} flats are at {100 * min(levels):.0f}–{100 * max(levels):.0f} % of "
-            "saturation, outside 10–80 %; take them again with another exposure, or state the saturation_adu of the "
-            "camera under [camera] in observatory.toml."
-        )
-    if len(kept) < len(frames):
-        notes.append(
-            f"{len(frames) - len(kept)} of {len(frames)} flats are not at 10 to 80 % of saturation and left out."
-        )
-    return kept, prepare
-
-
-def _flat_level(sample: Image, frame: Frame, settings: Settings) -> tuple[float, float]:
-    """Level of a flat as a fraction of saturation, and the lowest that is usable.
-
-    Where nobody states the saturation, the converter may be one of few bits: what would be enough for the smallest is.
-    """
-    saturation_adu, not_stated = saturation_level(frame.info, settings)
-    if not not_stated:
-        return float(np.nanmedian(sample)) / saturation_adu, FLAT_RANGE[0]
-    if np.mean(sample == np.nanmax(sample)) > LARGEST_FULL_SHARE:
-        return 1.0, FLAT_RANGE[0]
-    return float(np.nanmedian(sample)) / saturation_adu, FLAT_RANGE[0] * min(CONVERTER_TOPS_ADU) / saturation_adu
-
-
-def _divide(lower: ChosenMasters, exposure_s: float | None, level: float) -> Prepare:
-    return lambda rows, first, end: (rows - pedestal_adu(lower, exposure_s, slice(first, end))) / np.float32(level)
-
-
-def pedestal_adu(chosen: ChosenMasters, exposure_s: float | None, rows: slice = slice(None)) -> Image:
-    """Bias level and dark signal to subtract from (rows of) a frame of this exposure, ADU; needs a bias or a dark.
-
-    Without a dark of the same exposure: bias + (dark - bias) t / t_dark.
-    """
-    if chosen.dark is not None and (chosen.bias is None or same_exposure(chosen.dark.exposure_s, exposure_s)):
-        return read_master(chosen.dark.path)[rows]
-    assert chosen.bias is not None
-    bias = read_master(chosen.bias.path)[rows]
-    if chosen.dark is None:
-        return bias
-    factor = np.float32(dark_factor(chosen, exposure_s))
-    return np.asarray(bias + (read_master(chosen.dark.path)[rows] - bias) * factor, dtype=np.float32)
-
-
-def dark_factor(chosen: ChosenMasters, exposure_s: float | None) -> float:
-    """How much longer the frame is than the dark; 1 when they are the same or the frame's length is not known."""
-    dark_s = chosen.dark.exposure_s if chosen.dark is not None else None
-    if not dark_s or exposure_s is None or same_exposure(dark_s, exposure_s):
-        return 1.0
-    return exposure_s / dark_s
 
 
 # ---- files -----------------------------------------------------------------------------------------------
@@ -238,6 +183,7 @@ def _stored(plan: MasterPlan, digest: str, path: Path) -> Master | None:
             return None
         n, single = int(header["NINPUT"]), float(header["SIGMA1"])
         notes = tuple(clean_text(header[f"NOTE{k}"]) for k in range(1, 10) if f"NOTE{k}" in header)
+        detector = _detector(header) if plan.kind == "flat" else None
     except (FrameError, OSError, KeyError, ValueError):
         return None
     return Master(
@@ -246,23 +192,11 @@ def _stored(plan: MasterPlan, digest: str, path: Path) -> Master | None:
         exposure_s=plan.exposure_s, temperature_c=plan.temperature_c,
         inputs=tuple(frame.id for frame in plan.inputs), n_inputs=n,
         noise=single / math.sqrt(n) if single >= 0 else None, single_noise=single if single >= 0 else None, notes=notes,
+        mjd=plan.mjd, detector=detector,
     )  # fmt: skip
 
 
-@lru_cache(maxsize=8)
-def read_master(path: Path) -> Image:
-    """Pixels of a master, (ny, nx) float32, read-only; kept, as a night uses the same few again and again.
-
-    Raises
-    ------
-    FrameError
-        The file is gone or damaged.
-    """
-    from astropy.io import fits
-
-    try:
-        data = np.ascontiguousarray(fits.getdata(path, memmap=False), dtype=np.float32)
-    except Exception as error:  # astropy raises many kinds for a damaged file
-        raise FrameError(f"master frame {clean_text(path.name)} cannot be read; reduce again to rebuild it.") from error
-    data.flags.writeable = False
-    return data
+def _detector(header: Any) -> DetectorMeasure:
+    values = [float(header[f"DETECT{k}"]) for k in range(1, 8)]
+    gain, gain_err, _, read_noise_e, straight, bent, full = (None if value < 0 else value for value in values)
+    return DetectorMeasure(gain, gain_err, int(values[2]), read_noise_e, straight, bent, full)

@@ -15,6 +15,8 @@ from numpy.typing import NDArray
 from reduce.plain_text import clean_text
 from reduce.records import (
     STAR_DTYPE,
+    ApparentModulus,
+    BandMean,
     BudgetLine,
     Caution,
     Estimate,
@@ -22,8 +24,13 @@ from reduce.records import (
     FitCurve,
     FitPoint,
     FrameInfo,
+    HubbleModulus,
     Measured,
+    PeriodAlias,
+    Posterior,
+    Pulsation,
     Quality,
+    SourceOffset,
 )
 
 R = TypeVar("R")
@@ -132,5 +139,19 @@ def estimate_from_json(text: str) -> Estimate:
             for item in data["curves"]
         ),
     }
+    nested["offsets"] = tuple(from_plain(SourceOffset, item) for item in data.get("offsets", ()))
+    for key, record in (("posterior", Posterior), ("hubble", HubbleModulus)):
+        nested[key] = from_plain(record, data[key]) if data.get(key) else None
+    if data.get("pulsation") is not None:
+        nested["pulsation"] = _pulsation(data["pulsation"])
     flat = {key: value for key, value in data.items() if key not in nested}
     return from_plain(Estimate, {**flat, **nested})
+
+
+def _pulsation(data: Mapping[str, Any]) -> Pulsation:
+    nested: dict[str, Any] = {
+        "aliases": tuple(from_plain(PeriodAlias, item) for item in data["aliases"]),
+        "means": tuple(from_plain(BandMean, item) for item in data["means"]),
+        "moduli": tuple(from_plain(ApparentModulus, item) for item in data["moduli"]),
+    }
+    return from_plain(Pulsation, {**data, **nested})

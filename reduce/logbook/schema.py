@@ -7,7 +7,7 @@ APPLICATION_ID = 0x46414445
 
 APPEND_ONLY = (
     "frame", "location", "recipe", "master", "reduction", "sequence", "sequence_star", "target", "decision",
-    "entry", "estimate", "setting",
+    "entry", "estimate", "setting", "host_light", "imported_point",
 )  # fmt: skip
 """Tables that refuse UPDATE and DELETE."""
 
@@ -141,5 +141,37 @@ def _guards(tables: tuple[str, ...]) -> str:
     )
 
 
-MIGRATIONS: tuple[str, ...] = (_TABLES + _guards(APPEND_ONLY),)
+_HOST_LIGHT = """
+CREATE TABLE host_light (
+    id TEXT PRIMARY KEY,
+    frame TEXT NOT NULL REFERENCES frame (id),
+    recipe TEXT NOT NULL,                -- of the measurement whose stamps were used
+    target TEXT NOT NULL,
+    inputs TEXT NOT NULL,                -- digest: method, host position, reference frames, version
+    content TEXT NOT NULL,               -- JSON of records.HostLight
+    star BLOB NOT NULL,                  -- the target's row without its host, packed as in reduction; empty: refused
+    star_dtype TEXT NOT NULL,
+    at TEXT NOT NULL,
+    UNIQUE (frame, recipe, target, inputs)
+);
+"""
+
+_IMPORTED_POINT = """
+CREATE TABLE imported_point (
+    id TEXT PRIMARY KEY,
+    target TEXT NOT NULL,
+    source TEXT NOT NULL,                -- the observatory that measured it
+    digest TEXT NOT NULL UNIQUE,         -- of the content: the same point is kept once
+    content TEXT NOT NULL,               -- JSON of records.Point
+    at TEXT NOT NULL
+);
+"""
+
+_LATER = ("host_light", "imported_point")
+
+MIGRATIONS: tuple[str, ...] = (
+    _TABLES + _guards(tuple(table for table in APPEND_ONLY if table not in _LATER)),
+    _HOST_LIGHT + _guards(("host_light",)),
+    _IMPORTED_POINT + _guards(("imported_point",)),
+)
 """Script ``n`` leads from version n to n + 1; never change one that was released, add one."""

@@ -15,7 +15,9 @@ import numpy as np
 
 from reduce.logbook.arrivals import Arrivals
 from reduce.logbook.database import Database, LogbookError, system_mounts
+from reduce.logbook.host_light import HostRows
 from reduce.logbook.ids import IdMaker, iso, utc_now
+from reduce.logbook.imported import ImportedPoints
 from reduce.logbook.log import Log
 from reduce.logbook.packing import (
     REDUCTION_COLUMNS,
@@ -57,12 +59,14 @@ class Master:
     """Frame ids."""
 
 
-class Logbook(Log, Arrivals):
+class Logbook(Log, Arrivals, HostRows, ImportedPoints):
     """The logbook of one campaign folder; threads may share it. Every writing method is one transaction.
 
     Decisions, notes and searches are in `reduce.logbook.log.Log`, attempts and problems of files in
-    `reduce.logbook.arrivals.Arrivals`. All methods raise `LogbookError` with one
-    sentence when the file cannot be read or written; then nothing was changed.
+    `reduce.logbook.arrivals.Arrivals`, targets without their hosts in `reduce.logbook.host_light.HostRows`, points
+    of other observatories in `reduce.logbook.imported.ImportedPoints`.
+    All methods raise `LogbookError` with one sentence when the file cannot be read or written; then nothing was
+    changed.
     """
 
     def __init__(self, folder: Path, database: Database, clock: Callable[[], datetime], new_id: IdMaker) -> None:
@@ -128,7 +132,14 @@ class Logbook(Log, Arrivals):
 
     def stamp(self) -> int:
         """Grows with every change that faces show, whoever made it; cheap enough to poll."""
-        total = " + ".join(f"(SELECT coalesce(max(rowid), 0) FROM {table})" for table in STAMPED)
+        return self._rows_in(STAMPED)
+
+    def measured_stamp(self) -> int:
+        """Grows with every change that light curves rest on: all of them but estimates and lines of the log."""
+        return self._rows_in(tuple(table for table in STAMPED if table not in ("estimate", "entry")))
+
+    def _rows_in(self, tables: tuple[str, ...]) -> int:
+        total = " + ".join(f"(SELECT coalesce(max(rowid), 0) FROM {table})" for table in tables)
         row = self._database.row(f"SELECT {total}")
         return int(row[0]) if row else 0
 
@@ -235,9 +246,13 @@ class Logbook(Log, Arrivals):
         return {(frame, recipe) for frame, recipe in rows}
 
     def first_solution(self, like: FrameInfo) -> FieldSolution | None:
-        """Plate solution of the earliest recognised frame of the same camera, size and binning."""
+        """Plate solution of the earliest frame of the same camera, size and binning that was recognised by itself.
+
+        Frames recognised with its help do not count: the first of them would change what the others are measured with.
+        """
         rows = self._database.rows(
-            "SELECT info, solution FROM reduction WHERE outcome = 'measured' AND camera = ? ORDER BY mjd_mid, frame",
+            "SELECT info, solution FROM reduction WHERE outcome = 'measured' AND camera = ? AND recipe NOT IN "
+            "(SELECT id FROM recipe WHERE json_extract(content, '$.camera') IS NOT NULL) ORDER BY mjd_mid, frame",
             (like.camera,),
         )
         for info_text, solution_text in rows:
@@ -306,7 +321,11 @@ class Logbook(Log, Arrivals):
 
     def current_sequence(self) -> ComparisonSequence | None:
         """The comparison sequence added last."""
-        row = self._database.row("SELECT id, name, bands FROM sequence ORDER BY rowid DESC LIMIT 1")
+        return self.sequence_by_id(self.sequence_id())
+
+    def sequence_by_id(self, key: str) -> ComparisonSequence | None:
+        """One of the sequences that were ever in force."""
+        row = self._database.row("SELECT id, name, bands FROM sequence WHERE id = ?", (key,))
         if row is None:
             return None
         stars = self._database.rows(

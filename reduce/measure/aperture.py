@@ -66,7 +66,7 @@ def circle_overlap(dx: Floats, dy: Floats, radius_px: float) -> Floats:
     r = radius_px
     x = np.clip(np.concatenate([dx - 0.5, dx[:, :, -1:] + 0.5], axis=2), -r, r)
     y = np.clip(np.concatenate([dy - 0.5, dy[:, -1:, :] + 0.5], axis=1), -r, r)
-    chord = np.sqrt(r**2 - y**2)
+    chord = np.sqrt(np.maximum(r**2 - y**2, 0.0))
     segment = np.sign(y) * (_under_arc(np.abs(x), r) - _under_arc(chord, r))
     corner = np.where(np.abs(x) <= chord, x * y, np.sign(x) * (chord * y + segment))
     return np.diff(np.diff(corner, axis=1), axis=2)
@@ -186,6 +186,10 @@ def _measure_block(
     empty = ~np.isfinite(light) | ~inside
     star = np.where(empty, 0.0, light - sky[:, None, None])
     readout = np.where(empty, 0.0, cut_out(image.variance_e2, x_px, y_px, half, 0.0))
+    # The flat raised the light and, by as much more, the noise of its photons.
+    per_e = np.ones(1)
+    if image.sensitivity is not None:
+        per_e = 1.0 / cut_out(image.sensitivity, x_px, y_px, half, 1.0).astype(float)
     hit = _cosmic_rays(star, readout, np.maximum(sky, 0.0), fwhm_px) & inside
     causes = (
         (StarFlag.SATURATED, (mask & PixelFlag.SATURATED) > 0),
@@ -204,11 +208,12 @@ def _measure_block(
             rows["flags"][touched[struck], k] |= np.uint32(flag)
         part = np.where(inside[at], part, 0.0)
         square = part**2
+        photon_square = square if image.sensitivity is None else square * per_e[at]
         flux = np.einsum("nij,nij->n", part, star[at])
         area = part.sum(axis=(1, 2))
         # Pixels in part inside count with the square of their part: that is how their noise enters the sum.
-        photons = np.maximum(np.einsum("nij,nij->n", square, star[at]), 0.0)
-        photons += np.maximum(sky, 0.0) * square.sum(axis=(1, 2))
+        photons = np.maximum(np.einsum("nij,nij->n", photon_square, star[at]), 0.0)
+        photons += np.maximum(sky, 0.0) * photon_square.sum(axis=(1, 2))
         flat = image.relative_flat_error**2 * np.einsum("nij,nij->n", square, np.where(empty, 0.0, light)[at] ** 2)
         noise = np.einsum("nij,nij->n", square, readout[at])
         rows["flux_e"][:, k], rows["area_px"][:, k] = np.where(np.isfinite(sky), flux, np.nan), area

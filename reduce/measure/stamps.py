@@ -5,7 +5,7 @@ each stamp its light and variance (i4, in the steps that the description states)
 endian. Light is kept in steps of 1/16 of the sky's noise, so rounding adds 0.02 % to the noise; variance in steps of
 1/64 of its median. No clock, no machine and no random number enters: equal input gives equal bytes.
 
-Size: about 40 kB a frame for a target of 60 × 60 pixels and 30 stars of 25 × 25 (1 byte of light in a pixel of sky).
+Size: about 33 kB a frame for a target of 60 × 60 pixels and 40 stars of 25 × 25 (1 byte of light in a pixel of sky).
 """
 
 from __future__ import annotations
@@ -21,13 +21,14 @@ import numpy as np
 from numpy.typing import NDArray
 
 from reduce.plain_text import PlainError, clean_text
-from reduce.records import CalibratedImage, FieldSolution, Image, Mask
+from reduce.records import CalibratedImage, FieldSolution, Image, Mask, StarFlag
 
 MAGIC = b"FST1"
 TARGET_FWHM, TARGET_ARCSEC = 15.0, 60.0
 """Side of a target's stamp: the larger of the two."""
-STAR_FWHM = 8.0
-MOST_STARS = 30
+STAR_FWHM, STAR_ARCSEC = 8.0, 24.0
+"""Side of a star's: what a frame of much worse seeing spreads a star over, when this one serves as its reference."""
+MOST_STARS = 40
 STEPS_PER_SIGMA = 16.0
 VARIANCE_STEPS = 64.0
 LARGEST_SIDE_PX = 1024
@@ -56,8 +57,13 @@ class Stamp:
     sky_e_px: float
     data_e: Image
     variance_e2: Image
-    """Without photon noise, as in CalibratedImage."""
+    """Without photon noise, as in CalibratedImage, but for the part by which the flat raised that of the sky."""
     mask: Mask
+
+
+def target_half_px(fwhm_px: float, scale_arcsec: float) -> int:
+    """Pixels from a target to the border of its stamp; on a galaxy, what is detected so near may be part of it."""
+    return math.ceil(max(TARGET_FWHM * fwhm_px, TARGET_ARCSEC / scale_arcsec) / 2.0)
 
 
 @dataclass(frozen=True, slots=True)
@@ -72,6 +78,12 @@ class StampPack:
     gain_e_per_adu: float
     stamps: tuple[Stamp, ...]
 
+    @property
+    def scale_arcsec(self) -> float:
+        """Of one pixel."""
+        (a, b), (c, d) = self.cd_deg
+        return math.sqrt(abs(a * d - b * c)) * 3600.0
+
 
 def pack(image: CalibratedImage, table: NDArray[Any], fwhm_px: float, solution: FieldSolution) -> bytes:
     """Pack of one frame.
@@ -79,14 +91,15 @@ def pack(image: CalibratedImage, table: NDArray[Any], fwhm_px: float, solution: 
     Parameters
     ----------
     table
-        STAR_DTYPE rows of the frame: all targets (role 1) and the 30 brightest field stars are kept.
+        STAR_DTYPE rows of the frame: all targets (role 1) and the 40 brightest field stars are kept, saturated
+        ones after all others.
     """
     ny, nx = image.data_e.shape
-    target_side = max(TARGET_FWHM * fwhm_px, TARGET_ARCSEC / solution.scale_arcsec)
+    target_half = target_half_px(fwhm_px, solution.scale_arcsec)
+    star_half = math.ceil(max(STAR_FWHM * fwhm_px, STAR_ARCSEC / solution.scale_arcsec) / 2.0)
     described, blocks = [], []
     for row in _chosen(table):
-        side = target_side if row["role"] == 1 else STAR_FWHM * fwhm_px
-        half = min(math.ceil(side / 2.0), (LARGEST_SIDE_PX - 1) // 2)
+        half = min(target_half if row["role"] == 1 else star_half, (LARGEST_SIDE_PX - 1) // 2)
         column, line = round(float(row["x_px"])), round(float(row["y_px"]))
         x0, x1 = max(column - half, 0), min(column + half + 1, nx)
         y0, y1 = max(line - half, 0), min(line + half + 1, ny)
@@ -94,7 +107,8 @@ def pack(image: CalibratedImage, table: NDArray[Any], fwhm_px: float, solution: 
             continue
         at = np.s_[y0:y1, x0:x1]
         light, light_step = _quantised(image.data_e[at], _noise(row, image.variance_e2[at]) / STEPS_PER_SIGMA)
-        variance, variance_step = _quantised(image.variance_e2[at], _middle(image.variance_e2[at]) / VARIANCE_STEPS)
+        noise = _variance(image, at, float(row["sky_e_px"]))
+        variance, variance_step = _quantised(noise, _middle(noise) / VARIANCE_STEPS)
         described.append({
             "target": str(row["target"]), "x0": x0, "y0": y0, "nx": x1 - x0, "ny": y1 - y0,
             "x": float(row["x_px"]), "y": float(row["y_px"]),
@@ -160,11 +174,19 @@ def _body(content: bytes) -> bytes:
 
 
 def _chosen(table: NDArray[Any]) -> NDArray[Any]:
-    """Targets by name, then the brightest stars."""
+    """Targets by name, then the brightest stars; a saturated one tells neither blur nor light."""
     targets, stars = table[table["role"] == 1], table[table["role"] == 0]
     targets = targets[np.argsort(targets["target"], kind="stable")]
     brightness = np.nan_to_num(stars["flux_e"][:, 4], nan=-np.inf)
-    return np.concatenate([targets, stars[np.argsort(-brightness, kind="stable")][:MOST_STARS]])
+    saturated = stars["flags"][:, 4] & int(StarFlag.SATURATED) != 0
+    return np.concatenate([targets, stars[np.lexsort((-brightness, saturated))][:MOST_STARS]])
+
+
+def _variance(image: CalibratedImage, at: tuple[slice, slice], sky_e_px: float) -> Image:
+    """Where a flat divided by s, the sky's photons have sky/s electrons² of noise; whoever uses a stamp adds sky."""
+    if image.sensitivity is None or not sky_e_px > 0:
+        return image.variance_e2[at]
+    return image.variance_e2[at] + np.float32(sky_e_px) * (np.float32(1.0) / image.sensitivity[at] - np.float32(1.0))
 
 
 def _noise(row: Any, variance_e2: Image) -> float:

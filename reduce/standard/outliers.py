@@ -8,7 +8,11 @@ from numpy.typing import NDArray
 from reduce.records import Floats
 
 OUTLIER_SIGMA = 4.0
-WRONG_ENTRY_MAG = 0.05
+WRONG_ENTRY_MAG, WRONG_ENTRY_SIGMA = 0.04, 3.5
+"""A little below 0.05 mag and 4 σ: what is wrong by that much is measured as less every other time."""
+LARGEST_TERM = 0.35
+"""Colour terms of photometric filters are smaller (common practice); what only a larger one explains is wrong."""
+TERM_STEP = 0.01
 VARIABLE_MAG = 0.05
 """Extra scatter from which a comparison star is set aside as variable (common practice)."""
 LEAST_FRAMES_FOR_SCATTER = 5
@@ -25,13 +29,24 @@ def wild(offset: Floats) -> NDArray[np.bool_]:
     return far
 
 
-def _star_line(z: Floats, z_err: Floats, colour: Floats, tilted: bool) -> Floats:
-    """Residuals of the stars' mean offsets from a robust level (Cauchy weights, median start).
+def _start(z: Floats, z_err: Floats, colour: Floats, slopes: Floats) -> tuple[float, float]:
+    """Level and slope that most stars agree on: the least Cauchy loss over medians about all the slopes."""
+    rest = z - slopes[:, None] * colour
+    levels = np.median(rest, axis=1)
+    loss = np.log1p(((rest - levels[:, None]) / (2 * z_err)) ** 2).sum(axis=1)
+    best = int(np.argmin(loss))
+    return float(levels[best]), float(slopes[best])
 
-    ``tilted``: with a slope in colour, for one wrong star may have bent the colour term that was taken off.
+
+def _star_line(z: Floats, z_err: Floats, colour: Floats, term: float | None) -> Floats:
+    """Residuals of the stars' mean offsets from a robust level (Cauchy weights).
+
+    ``term``: the fitted colour term that was taken off, which wrong stars may have bent; None: it is not doubted.
     """
-    level, slope = float(np.median(z)), 0.0
-    scale = np.maximum(z_err, 1.4826 * np.median(np.abs(z - level)) / 3)
+    tilted = term is not None
+    terms = np.arange(-LARGEST_TERM, LARGEST_TERM + TERM_STEP / 2, TERM_STEP)
+    level, slope = _start(z, z_err, colour, terms - term if term is not None else np.zeros(1))
+    scale = np.maximum(z_err, 1.4826 * np.median(np.abs(z - level - slope * colour)) / 3)
     for _ in range(30):
         r = z - level - slope * colour
         weight = 1.0 / (z_err**2 * (1 + (r / (2 * scale)) ** 2))
@@ -51,6 +66,7 @@ def stars_to_set_aside(
     variance: Floats,
     prior: Floats,
     colour: Floats,
+    term: float,
     adopted_term_err: float | None,
 ) -> dict[int, str]:
     """Stars whose catalogue entry is wrong or whose light varies; never so many that fewer than 3 remain.
@@ -63,6 +79,8 @@ def stars_to_set_aside(
         (F, S) of the measurements that take part (else 0), and the photons' variance.
     prior, colour
         (S,) 1/catalogue error², and colour.
+    term
+        Colour term that was taken off.
     adopted_term_err
         Error of a colour term that was not fitted; None when it was.
     """
@@ -74,12 +92,12 @@ def stars_to_set_aside(
     z_err = np.sqrt(1 / prior[seen] + 1 / total[seen])
     if adopted_term_err is not None:
         z_err = np.hypot(z_err, adopted_term_err * (colour[seen] - np.median(colour[seen])))
-    line = _star_line(z, z_err, colour[seen], tilted=adopted_term_err is None and len(seen) > 4)
+    line = _star_line(z, z_err, colour[seen], term if adopted_term_err is None and len(seen) > 4 else None)
     found: dict[int, str] = {}
     for k in np.argsort(-np.abs(line / z_err), kind="stable"):
         star = int(seen[k])
         mine = residual[:, star][weight[:, star] > 0]
-        if abs(line[k]) >= WRONG_ENTRY_MAG and abs(line[k]) >= OUTLIER_SIGMA * z_err[k]:
+        if abs(line[k]) >= WRONG_ENTRY_MAG and abs(line[k]) >= WRONG_ENTRY_SIGMA * z_err[k]:
             found[star] = f"measured {abs(line[k]):.2f} mag {'brighter' if line[k] > 0 else 'fainter'} than catalogued"
         elif len(mine) >= LEAST_FRAMES_FOR_SCATTER:
             scatter = 1.4826 * float(np.median(np.abs(mine - np.median(mine))))

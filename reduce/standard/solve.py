@@ -4,13 +4,13 @@ from __future__ import annotations
 
 from collections.abc import Iterable, Mapping
 from dataclasses import dataclass
+from types import MappingProxyType
 
 import numpy as np
 from numpy.typing import NDArray
 
 from reduce.almanac.times import night_of
 from reduce.records import (
-    LADDER_FWHM,
     Choices,
     ColourTerm,
     Floats,
@@ -22,11 +22,15 @@ from reduce.records import (
 )
 from reduce.settings import Settings
 from reduce.standard import verdict as judge
-from reduce.standard.aperture import best_radius, nearest_radius, position_loss_mag
+from reduce.standard.aperture import best_radius, nearest_radius, position_err_fwhm, position_loss_mag, radius_fwhm
 from reduce.standard.colour import ADOPTED_TERM_ERR, can_fit_term, catalogue_colour, colour_coefficient
 from reduce.standard.extinction import above_atmosphere, fit_extinction
+from reduce.standard.findings import look_at_images, look_at_zero_points
 from reduce.standard.frame_stars import FrameStars, frame_stars
+from reduce.standard.position import no_planes, season_planes, sides, with_frame_planes
+from reduce.standard.residual_images import mark_residual_images
 from reduce.standard.scatter import repeatability
+from reduce.standard.wheel import wheel_slips
 from reduce.standard.zeropoint import JointSolution, solve_zero_points
 
 STAR_BY_PERSON = "set aside by a person"
@@ -44,6 +48,14 @@ class SolvedFrame:
     coefficient: float
     """T - k″ X: what a standard colour is multiplied by."""
     verdict: FrameVerdict
+    scatter_mag: float
+    """What single stars of this frame scatter beyond their photons, as patchy cloud makes them."""
+    star_shift_mag: Floats
+    """(n_stars,) to add to the zero point at each star's place on the frame."""
+    target_shift_mag: Floats
+    """(n_targets,)."""
+    target_shift_err_mag: Floats
+    """(n_targets,)."""
 
 
 @dataclass(frozen=True, slots=True)
@@ -53,7 +65,7 @@ class BandSystem:
     camera: str
     band: str
     radius: int
-    """Index into LADDER_FWHM."""
+    """Index into LADDER_FWHM, or PSF_COLUMN."""
     term: ColourTerm
     sequence_err_mag: float
     """Error of the comparison sequence at the colour ``term.colour_mean``, shared by all frames."""
@@ -83,7 +95,11 @@ class StandardSolution:
 
 
 def solve_standard(
-    measured: Iterable[Measured], sequence: Sequence, choices: Choices, settings: Settings
+    measured: Iterable[Measured],
+    sequence: Sequence,
+    choices: Choices,
+    settings: Settings,
+    known_terms: Mapping[tuple[str, str], tuple[float, float]] = MappingProxyType({}),
 ) -> StandardSolution:
     """Verdicts, zero points, colour terms and star results of all frames.
 
@@ -97,8 +113,11 @@ def solve_standard(
         Comparison stars.
     choices, settings
         What people decided, and the observatory's colour terms and second-order extinction.
+    known_terms
+        Camera, band → colour term and its error, from nights of standard stars: adopted where the comparison stars
+        cannot give one and the settings name none.
     """
-    rows = sorted(measured, key=lambda row: row.frame)
+    rows = mark_residual_images(sorted(measured, key=lambda row: row.frame))
     longitude = settings.site.longitude_deg if settings.site is not None else None
     groups: dict[tuple[str, str], list[FrameStars]] = {}
     verdicts: dict[str, FrameVerdict] = {}
@@ -114,14 +133,18 @@ def solve_standard(
     zero_points: dict[str, FrameZeroPoint] = {}
     notes: list[str] = []
     results: dict[tuple[str, str], StarResult] = {}
+    slips: dict[str, str] = {}
+    for camera in sorted({camera for camera, _ in groups}):
+        mine = [frame for key in sorted(groups) if key[0] == camera for frame in groups[key]]
+        slips |= wheel_slips(mine, sequence)
     for camera, band in sorted(groups):
         frames = sorted(groups[camera, band], key=lambda frame: (frame.mjd, frame.frame))
-        group = _Group(camera, band, frames, sequence, choices, settings)
+        group = _Group(camera, band, frames, sequence, choices, settings, known_terms.get((camera, band)), slips)
         system, joint = group.solve()
         systems.append(system)
         verdicts |= group.verdicts
         zero_points |= group.zero_points(joint, system)
-        notes += group.extinction_notes(joint)
+        notes += [*group.extinction_notes(joint), *group.position_notes()]
         for result in group.star_results(joint):
             before = results.get((result.band, result.star))
             if before is None or result.n_frames > before.n_frames:
@@ -140,7 +163,10 @@ class _Group:
         sequence: Sequence,
         choices: Choices,
         settings: Settings,
+        known_term: tuple[float, float] | None = None,
+        slips: Mapping[str, str] = MappingProxyType({}),
     ) -> None:
+        self.slips = slips
         self.camera, self.band, self.frames, self.sequence, self.choices = (
             camera,
             band,
@@ -150,12 +176,17 @@ class _Group:
         )
         asked = choices.aperture_fwhm.get(band, settings.photometry.aperture_fwhm.get(band))
         self.radius = best_radius(frames) if asked is None else nearest_radius(asked)
-        self.adopted_term = settings.photometry.colour_terms.get(band, 0.0)
+        self.adopted_term, self.adopted_term_err = 0.0, ADOPTED_TERM_ERR
+        if band in settings.photometry.colour_terms:
+            self.adopted_term = settings.photometry.colour_terms[band]
+        elif known_term is not None:
+            self.adopted_term, self.adopted_term_err = known_term
         self.second_order = {
             **settings.photometry.second_order_extinction,
             **choices.second_order_extinction,
         }.get(band, 0.0)
         self.airmass = np.array([np.nan if f.quality.airmass is None else f.quality.airmass for f in frames])
+        self.planes = no_planes(len(frames))
         self.verdicts: dict[str, FrameVerdict] = {}
         self.speaking = np.ones(len(frames), bool)
         """Frames that say something about the stars: the kept ones, where there are any."""
@@ -176,20 +207,20 @@ class _Group:
         self.mag_err = np.array([frame.mag_err[:, self.radius] for frame in self.frames]).reshape(shape)
         usable = with_colour if self.colour_known else np.isfinite(self.catalogue)
         self.columns = np.flatnonzero(usable & np.isfinite(self.mag).any(axis=0))
+        self.place = np.array([frame.place for frame in self.frames]).reshape(*shape, 2)
 
     def solve(self) -> tuple[BandSystem, JointSolution]:
         """Solve, judge, and solve again with only the kept frames speaking for stars and colour term."""
-        usual = judge.usual_fwhm_px([frame.quality for frame in self.frames])
-        looks = [judge.image_findings(frame.quality, usual) for frame in self.frames]
+        looks = look_at_images(self.frames, self.radius, self.slips)
         first = [judge.verdict(f.frame, look, self.choices) for f, look in zip(self.frames, looks, strict=True)]
         informs = np.array([verdict.state == "kept" for verdict in first])
         if not informs.any():
             informs = np.array([verdict.state != "dropped" for verdict in first])
-        joint = self._joint(informs)
+        joint = self._level(informs)
+        whole = np.array([all(state != "dropped" for state, _ in look) for look in looks])
         expected = self._expected_rms(joint)
-        dim = judge.dimming(joint.zp_mag, self.airmass, self.band)
-        for k, (frame, look) in enumerate(zip(self.frames, looks, strict=True)):
-            sky = judge.sky_findings(dim[k], joint.rms_mag[k], expected[k], int(joint.n_stars[k]), self.band)
+        skies = look_at_zero_points(self.frames, self.band, joint, expected, self.planes, whole)
+        for frame, look, sky in zip(self.frames, looks, skies, strict=True):
             self.verdicts[frame.frame] = judge.verdict(frame.frame, look + sky, self.choices)
         states = np.array([self.verdicts[frame.frame].state for frame in self.frames])
         now = states == "kept" if (states == "kept").any() else states != "dropped"
@@ -198,12 +229,38 @@ class _Group:
         self.speaking = now
         return self._system(joint, now), joint
 
-    def _joint(self, informs: NDArray[np.bool_]) -> JointSolution:
+    def _level(self, informs: NDArray[np.bool_]) -> JointSolution:
+        """Solution with the planes that the residuals demand: of the season first, then of single frames."""
+        joint, place = self._joint(informs), self.place[:, self.columns]
+        side = sides(
+            np.array([frame.rotation_deg for frame in self.frames]),
+            np.array([frame.mirrored for frame in self.frames]),
+        )
+        self.planes = season_planes(
+            self._offsets(), self.mag_err[:, self.columns], self.catalogue_err[self.columns],
+            self.colour[self.columns], joint, informs, place, side,
+        )  # fmt: skip
+        if not self.planes.flat:
+            joint = self._joint(informs)
+        before = self.planes
+        err = np.hypot(self.mag_err[:, self.columns], joint.star_scatter_mag)
+        standing = np.isfinite(joint.residual)
+        standing[:, list(joint.set_aside)] = False
+        self.planes = with_frame_planes(before, joint.residual - joint.star_offset_mag, err, standing, place)
+        return self._joint(informs) if self.planes.of_frame_mag.any() else joint
+
+    def _offsets(self) -> Floats:
+        """(F, columns) catalogue - instrumental magnitude, freed of the second-order extinction and of the planes."""
         columns = self.columns
         airmass = np.nan_to_num(self.airmass, nan=0.0)
         second = self.second_order if self.colour_known else 0.0
         # The zero point keeps the first order; the second order of each star's colour is taken off here.
         mag = above_atmosphere(self.mag[:, columns], 0.0, airmass[:, None], second, self.colour[columns])
+        offsets: Floats = self.catalogue[columns] - mag
+        return offsets if self.planes.flat else offsets - self.planes.at(self.place[:, columns])
+
+    def _joint(self, informs: NDArray[np.bool_]) -> JointSolution:
+        columns = self.columns
         fit = self.colour_known and can_fit_term(self.colour[columns])
         by_person = {
             k: STAR_BY_PERSON
@@ -211,13 +268,13 @@ class _Group:
             if self.sequence.ids[star] in self.choices.stars_set_aside
         }
         return solve_zero_points(
-            self.catalogue[columns] - mag,
+            self._offsets(),
             self.mag_err[:, columns],
             self.catalogue_err[columns],
             self.colour[columns],
             informs,
             term=None if fit else self.adopted_term if self.colour_known else 0.0,
-            term_err=ADOPTED_TERM_ERR,
+            term_err=self.adopted_term_err,
             set_aside=by_person,
         )
 
@@ -236,12 +293,29 @@ class _Group:
         nights = np.unique([frame.night for frame in self.frames], return_inverse=True)[1]
         frame_scatter, night_scatter = repeatability(deviation, self.mag_err[:, self.columns], nights)
         second = self.second_order if self.colour_known else 0.0
+        expected = self._expected_rms(joint)
         solved = []
         for k, frame in enumerate(self.frames):
             if np.isfinite(joint.zp_mag[k]):
                 coefficient = colour_coefficient(joint.term, second, frame.quality.airmass)
                 zp, err = float(joint.zp_mag[k]), float(joint.zp_err_mag[k])
-                solved.append(SolvedFrame(frame, zp, err, coefficient, self.verdicts[frame.frame]))
+                stars = frame.place[self.columns[joint.used[k]]]
+                # The median deviation sees all stars of a patchy frame, σ_frame only those that were not rejected.
+                patchy = joint.frame_scatter_mag[k] > 0
+                excess = max(float(joint.rms_mag[k]) ** 2 - expected[k] ** 2, 0.0) ** 0.5 if patchy else 0.0
+                solved.append(
+                    SolvedFrame(
+                        stars=frame,
+                        zp_mag=zp,
+                        zp_err_mag=err,
+                        coefficient=coefficient,
+                        verdict=self.verdicts[frame.frame],
+                        scatter_mag=max(float(joint.frame_scatter_mag[k]), excess),
+                        star_shift_mag=np.nan_to_num(frame.place) @ self.planes.slope_mag[k],
+                        target_shift_mag=frame.target_place @ self.planes.slope_mag[k],
+                        target_shift_err_mag=self.planes.err_at(k, frame.target_place, stars),
+                    )
+                )
         term = ColourTerm(
             camera=self.camera,
             band=self.band,
@@ -259,7 +333,7 @@ class _Group:
             sequence_err_mag=joint.sequence_err_mag,
             frame_scatter_mag=frame_scatter,
             night_scatter_mag=night_scatter,
-            position_loss_mag=position_loss_mag(LADDER_FWHM[self.radius]),
+            position_loss_mag=position_loss_mag(radius_fwhm(self.radius), position_err_fwhm(self.frames)),
             frames=tuple(solved),
         )
 
@@ -275,7 +349,7 @@ class _Group:
                 chi2_dof=float(joint.chi2_dof[k]),
                 rms_mag=float(joint.rms_mag[k]),
                 slope_diagnostic=float(joint.slope[k]),
-                aperture_fwhm=LADDER_FWHM[self.radius],
+                aperture_fwhm=radius_fwhm(self.radius),
             )
             for k, frame in enumerate(self.frames)
             if np.isfinite(joint.zp_mag[k])
@@ -318,6 +392,12 @@ class _Group:
                 )
             )
         return rows
+
+    def position_notes(self) -> list[str]:
+        """Planes of the season, in words."""
+        if not self.planes.season:
+            return []
+        return [f"{self.camera}, {self.band}: the zero point changes over the frame ({self.planes.season})."]
 
     def extinction_notes(self, joint: JointSolution) -> list[str]:
         """k′ of the nights whose airmass reaches far enough, in words."""

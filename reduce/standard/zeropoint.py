@@ -14,7 +14,7 @@ of a frame (patchy cloud) are found from residuals that are significantly larger
 
 from __future__ import annotations
 
-from collections.abc import Mapping
+from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
 from types import MappingProxyType
 
@@ -69,15 +69,21 @@ class JointSolution:
     """(F,) robust star-to-star scatter, outliers included, mean offsets removed; NaN below 3 stars."""
     slope: Floats
     """(F,) residual colour slope, never applied; NaN below 5 stars."""
+    frame_scatter_mag: Floats
+    """(F,) σ_frame: what any star of the frame, the target too, scatters beyond photons and σ_star."""
 
 
 @dataclass(frozen=True, slots=True)
-class _Linear:
+class Linear:
+    """Answer of `least_squares`."""
+
     zp: Floats
     delta: Floats
     term: float
+    slopes: Floats
+    """(K,) of the further patterns."""
     covariance: Floats
-    """(S+1, S+1) of δ and T."""
+    """(S+1+K, S+1+K) of δ, T and the slopes."""
     gradient: Floats
     """(F, S+1) of zero point + T·0 with respect to δ, and -mean colour with respect to T."""
     weight_sum: Floats
@@ -89,10 +95,19 @@ def _mean(weight: Floats, value: Floats, total: Floats) -> Floats:
     return mean
 
 
-def _linear(
-    y: Floats, weight: Floats, colour: Floats, prior: Floats, informs: NDArray[np.bool_], term: float | None
-) -> _Linear:
-    """Least squares for zp, δ and T (held when ``term`` is given); einsum keeps the order of the sums."""
+def least_squares(
+    y: Floats,
+    weight: Floats,
+    colour: Floats,
+    prior: Floats,
+    informs: NDArray[np.bool_],
+    term: float | None,
+    patterns: Sequence[Floats] = (),
+) -> Linear:
+    """Least squares for zp, δ and T (held when ``term`` is given); einsum keeps the order of the sums.
+
+    ``patterns`` are K further (F, S) arrays; the slope of each is solved for too.
+    """
     n_stars = len(colour)
     colours = np.broadcast_to(colour, y.shape)
     total = weight.sum(axis=1)
@@ -100,26 +115,33 @@ def _linear(
     y_mean, c_mean = _mean(weight, y, total), _mean(weight, colours, total)
     w, s = weight[informs], share[informs]
     dy, dc = (y - y_mean[:, None])[informs], (colours - c_mean[:, None])[informs]
-    matrix = np.zeros((n_stars + 1, n_stars + 1))
-    matrix[:n_stars, :n_stars] = -np.einsum("fs,ft->st", w, s) + np.diag(w.sum(axis=0) + prior)
-    right = np.zeros(n_stars + 1)
-    if term is None:
-        matrix[:n_stars, -1] = matrix[-1, :n_stars] = -np.einsum("fs,fs->s", w, dc)
-        matrix[-1, -1] = np.einsum("fs,fs->", w, dc**2)
-        right[:n_stars] = -np.einsum("fs,fs->s", w, dy)
-        right[-1] = np.einsum("fs,fs,fs->", w, dc, dy)
-    else:
-        matrix[-1, -1] = 1.0
-        right[:n_stars] = -np.einsum("fs,fs->s", w, dy - term * dc)
-        right[-1] = term
+    at, size = n_stars, n_stars + 1 + len(patterns)
+    matrix, right = np.zeros((size, size)), np.zeros(size)
+    matrix[:at, :at] = -np.einsum("fs,ft->st", w, s) + np.diag(w.sum(axis=0) + prior)
+    if term is not None:
+        dy = dy - term * dc
+    right[:at] = -np.einsum("fs,fs->s", w, dy)
+    means = [_mean(weight, pattern, total) for pattern in patterns]
+    columns = [dc, *((pattern - mean[:, None])[informs] for pattern, mean in zip(patterns, means, strict=True))]
+    for j, one in enumerate(columns, start=at):
+        matrix[:at, j] = matrix[j, :at] = -np.einsum("fs,fs->s", w, one)
+        right[j] = np.einsum("fs,fs,fs->", w, one, dy)
+        for k, other in enumerate(columns[: j - at + 1], start=at):
+            matrix[j, k] = matrix[k, j] = np.einsum("fs,fs,fs->", w, one, other)
+    if term is not None:
+        matrix[at, :] = matrix[:, at] = 0.0
+        matrix[at, at], right[at] = 1.0, term
     covariance = np.linalg.inv(matrix)
     unknown = np.einsum("ij,j->i", covariance, right)
     if term is not None:
-        covariance[-1, -1] = 0.0
-    delta, slope = unknown[:n_stars], float(unknown[-1])
-    zp: Floats = np.where(total > 0, y_mean - slope * c_mean + np.einsum("fs,s->f", share, delta), np.nan)
+        covariance[at, at] = 0.0
+    delta, slope, slopes = unknown[:at], float(unknown[at]), unknown[at + 1 :]
+    level = y_mean - slope * c_mean + np.einsum("fs,s->f", share, delta)
+    for mean, pattern_slope in zip(means, slopes, strict=True):
+        level = level - pattern_slope * mean
+    zp: Floats = np.where(total > 0, level, np.nan)
     gradient: Floats = np.column_stack([share, -c_mean])
-    return _Linear(zp, delta, slope, covariance.astype(np.float64), gradient, total)
+    return Linear(zp, delta, slope, slopes, covariance.astype(np.float64), gradient, total)
 
 
 def solve_zero_points(
@@ -160,7 +182,7 @@ def solve_zero_points(
     for _ in range(MAX_ROUNDS):
         photon_star = variance + star_sigma**2
         full = photon_star + frame_sigma[:, None] ** 2
-        fit = _linear(y, np.where(keep, 1.0 / full, 0.0), colour, prior, informs, term)
+        fit = least_squares(y, np.where(keep, 1.0 / full, 0.0), colour, prior, informs, term)
         plain = y - np.nan_to_num(fit.zp)[:, None] - fit.term * colour
         residual = plain + fit.delta
         found = stars_to_set_aside(
@@ -170,6 +192,7 @@ def solve_zero_points(
             variance,
             prior,
             colour,
+            fit.term,
             None if term is None else term_err,
         )
         new = {star: why for star, why in found.items() if star not in aside}
@@ -187,14 +210,15 @@ def solve_zero_points(
             break
     photon_star = variance + star_sigma**2
     full = photon_star + frame_sigma[:, None] ** 2
-    fit = _linear(y, np.where(keep, 1.0 / full, 0.0), colour, prior, informs, term)
+    fit = least_squares(y, np.where(keep, 1.0 / full, 0.0), colour, prior, informs, term)
     return _conclude(
-        fit, y, measured, keep, photon_star, full, prior, colour, informs, star_sigma, aside, term, term_err
-    )
+        fit, y, measured, keep, photon_star, full, prior, colour, informs, (star_sigma, frame_sigma), aside,
+        term, term_err,
+    )  # fmt: skip
 
 
 def _conclude(
-    fit: _Linear,
+    fit: Linear,
     y: Floats,
     measured: NDArray[np.bool_],
     keep: NDArray[np.bool_],
@@ -203,7 +227,7 @@ def _conclude(
     prior: Floats,
     colour: Floats,
     informs: NDArray[np.bool_],
-    star_sigma: Floats,
+    scatter: tuple[Floats, Floats],
     aside: dict[int, str],
     term: float | None,
     term_err: float,
@@ -257,7 +281,7 @@ def _conclude(
         residual=np.where(measured & np.isfinite(fit.zp)[:, None], -plain, np.nan),
         used=keep,
         star_offset_mag=_aside_offset(catalogue_offset, plain, measured, full, informs),
-        star_scatter_mag=star_sigma,
+        star_scatter_mag=scatter[0],
         set_aside=aside,
         n_stars=n,
         chi2_dof=np.where(n > 1, chi2 / dof, np.nan),
@@ -267,6 +291,7 @@ def _conclude(
             np.nan,
         ),
         slope=_slopes(plain + fit.delta, np.where(keep, 1 / photon_star, 0.0), colour, n),
+        frame_scatter_mag=scatter[1],
     )
 
 

@@ -23,7 +23,8 @@ from astropy.io import fits
 from plain_photutils import measure as measure_plainly
 
 from reduce.field.sequence import read_sequence
-from reduce.frames.master_sets import Master, choose_masters, plan_masters
+from reduce.frames.master_plans import plan_masters
+from reduce.frames.master_sets import Master, choose_masters
 from reduce.frames.masters import build_master
 from reduce.frames.reader import frame_id, open_frame
 from reduce.pipeline import Recipe, measure_frame

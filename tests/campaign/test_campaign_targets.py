@@ -6,7 +6,8 @@ import pytest
 from hypothesis import given
 from hypothesis import strategies as st
 
-from reduce.campaign.targets import TargetError, parse_position, parse_target
+from reduce.campaign.targets import TargetError, corrected, parse_position, parse_target
+from reduce.records import Target
 
 
 def test_degrees_and_sexagesimal_mean_the_same_place():
@@ -60,3 +61,18 @@ def test_control_codes_do_not_survive_in_a_name():
 @given(st.floats(0, 359.99999), st.floats(-90, 90))
 def test_decimal_positions_are_kept_exactly(ra, dec):
     assert parse_position(f"{ra!r},{dec!r}", "Target") == (ra, dec)
+
+
+def test_metallicity_and_relation_of_a_pulsating_star():
+    star = Target("Korab b", "cepheid", 10.0, 10.0)
+    found = corrected(star, metallicity="-0.3,0.1", relation="freedman 2001")
+    assert (found.metallicity_dex, found.metallicity_err, found.relation) == (-0.3, 0.1, "Freedman 2001")
+    assert corrected(found, metallicity="0.1").metallicity_err is None
+    assert corrected(found, relation="").relation is None
+    for facts, words in (
+        ({"metallicity": "8.7"}, "outside −4 to 1.5 dex"),
+        ({"metallicity": "poor"}, "not a number"),
+        ({"relation": "Muraveva 2018"}, "is not one of: OGLE-III LMC"),
+    ):
+        with pytest.raises(TargetError, match=words):
+            corrected(star, **facts)

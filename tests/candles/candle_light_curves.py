@@ -51,12 +51,14 @@ def simulated(truth, bands="BVRI", phases=PHASES, err=0.02, noise=None, **errors
 
 def taken(curve, rows):
     """The rows of a light curve in the order given."""
-    return LightCurve(**{name: getattr(curve, name)[rows] for name in LightCurve.__slots__})
+    columns = {name: getattr(curve, name) for name in LightCurve.__slots__}
+    return LightCurve(**{name: None if values is None else values[rows] for name, values in columns.items()})
 
 
 def joined(one, two):
     """The points of both."""
-    both = {name: np.concatenate([getattr(one, name), getattr(two, name)]) for name in LightCurve.__slots__}
+    names = [name for name in LightCurve.__slots__ if getattr(one, name) is not None]
+    both = {name: np.concatenate([getattr(one, name), getattr(two, name)]) for name in names}
     return LightCurve(**both)
 
 

@@ -9,6 +9,7 @@ from hypothesis import given, settings
 from hypothesis import strategies as st
 
 from reduce.candles import type_ia
+from reduce.candles.assumptions import Assumptions
 from reduce.candles.budget import total_error
 from reduce.candles.model import type_ia_model
 from reduce.candles.points import select
@@ -140,7 +141,7 @@ def test_the_modulus_falls_by_about_1_1_for_a_magnitude_of_milky_way_reddening()
 
 
 def test_another_h0_moves_the_modulus_and_says_so():
-    here, there = type_ia.fit(CLEAN, target()), type_ia.fit(CLEAN, target(), h0=67.4)
+    here, there = type_ia.fit(CLEAN, target()), type_ia.fit(CLEAN, target(), Assumptions(h0=67.4))
     # arithmetic: 5 log10(73.04/67.4)
     assert there.mu - here.mu == pytest.approx(0.17450, abs=1e-5)
     assert "73.04" in here.scale
@@ -262,7 +263,10 @@ def test_the_flux_likelihood_equals_a_brute_force_integral():
     ln_p = -0.5 * np.einsum("iab,ij,jab->ab", left, inverse, left) - e / 0.108 - 0.5 * e**2
     mag, r = predicted(fluxes)
     flux = 10.0 ** (-0.4 * (mag[:, None, None] + mu + r[:, None, None] * e - 25.0))
-    variance = fluxes.err[:, None, None] ** 2 + flux**2 * (0.1**2 + (0.02 / 1.0857362) ** 2)
+    phase = (fluxes.mjd - t_max) / (1.0 + z)
+    scatter = np.interp(phase, model.phases, model.template_scatter["B"]) ** 2 + model.scatter.colour["B"] ** 2
+    relative = np.sqrt(scatter + 0.012**2 + 0.02**2) / 1.0857362
+    variance = fluxes.err[:, None, None] ** 2 + (flux * relative[:, None, None]) ** 2
     ln_p += (-0.5 * (fluxes.value[:, None, None] - flux) ** 2 / variance - 0.5 * np.log(variance)).sum(0)
     weight = np.exp(ln_p - ln_p.max())
     weight /= weight.sum()

@@ -237,3 +237,26 @@ def test_another_field_shares_no_star() -> None:
         ours.dec_deg[:, None] - other.dec_deg[None, :],
     )
     assert (apart.min(axis=1) * 3600 < 2.0).sum() <= 2
+
+
+def test_a_satellite_crosses_the_supernova_and_leaves_the_rest() -> None:
+    scene, exposure = make_scene(SCENARIO, 2, scatter=False), _light("satellite", "R")
+    now = draw_conditions(scene, exposure, np.random.default_rng(1))
+    crossed, clear = (
+        render_light(scene, shot, now, np.random.default_rng(2)) for shot in (exposure, replace(exposure, fault=None))
+    )
+    streak = crossed - clear
+    target = SCENARIO.supernova
+    x, y = now.pointing.to_pixels(np.array([target.ra_deg]), np.array([target.dec_deg]))
+    assert streak[round(float(y[0])), round(float(x[0]))] > 0.8 * 400.0
+    assert np.mean(streak > 10.0) < 0.03
+    assert np.ptp(np.nonzero(streak > 10.0)[1]) == SCENARIO.camera.nx - 1
+
+
+def test_a_slipped_wheel_shows_the_other_filter() -> None:
+    scene, exposure = make_scene(SCENARIO, 2, scatter=False), _light("wheel slip", "V")
+    through_r = replace(exposure, fault=None, band="R")
+    drawn = [draw_conditions(scene, shot, np.random.default_rng(1)) for shot in (exposure, through_r)]
+    assert drawn[0] == drawn[1]
+    images = [render_light(scene, shot, drawn[0], np.random.default_rng(2)) for shot in (exposure, through_r)]
+    assert np.array_equal(*images)

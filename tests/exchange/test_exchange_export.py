@@ -11,8 +11,8 @@ from astropy.table import Table
 from hypothesis import given
 from hypothesis import strategies as st
 
-from reduce.exchange.export import ExportError, write_points
-from reduce.exchange.point_json import ESTIMATE_KEYS, POINT_KEYS, estimate_to_json, point_to_json
+from reduce.exchange.export import EXPORT_KEYS, ExportError, write_points
+from reduce.exchange.point_json import ESTIMATE_KEYS, PULSATION_KEYS, estimate_to_json, point_to_json
 from reduce.records import BudgetLine, Caution, Estimate, FitCurve, Point, Target
 
 NIGHT = Point(
@@ -36,7 +36,7 @@ def text_of(points, style, **more):
 def test_ecsv_is_read_back_with_units_masks_and_head():
     text = text_of([NIGHT, LIMIT], "ecsv", meta={"version": "0.1", "scale": "H0 = 73.04 km/s/Mpc"})
     table = Table.read(text, format="ascii.ecsv")
-    assert tuple(table.colnames) == POINT_KEYS
+    assert tuple(table.colnames) == EXPORT_KEYS
     for key in ("mjd", "mag", "err", "err_night", "err_band", "flux", "flux_err", "bjd_tdb"):
         assert table[key][0] == getattr(NIGHT, key), key
     for key in ("mag", "err", "err_night", "err_band", "bjd_tdb", "flux_err"):
@@ -59,12 +59,12 @@ def test_no_points_give_the_header_alone(style):
     text = text_of([], style)
     table = Table.read(text, format=f"ascii.{style}")
     assert len(table) == 0
-    assert tuple(table.colnames) == POINT_KEYS
+    assert tuple(table.colnames) == EXPORT_KEYS
 
 
 def test_csv_has_one_header_line_and_plain_numbers():
     rows = list(csv.DictReader(io.StringIO(text_of([NIGHT, LIMIT], "csv"))))
-    assert tuple(rows[0]) == POINT_KEYS
+    assert tuple(rows[0]) == EXPORT_KEYS
     assert float(rows[0]["mjd"]) == NIGHT.mjd
     assert rows[1]["flux"] == "-3.0", "a negative number is no formula"
     assert rows[1]["mag"] == rows[1]["flux_err"] == ""
@@ -155,6 +155,6 @@ def test_estimate_json_has_no_nan():
     row = estimate_to_json(estimate)
     assert json.loads(json.dumps(row, allow_nan=False)) == row
     assert row["mu_err_fit"] is None
-    assert row["warnings"] == [{"name": "late", "evidence": "why"}]
+    assert row["warnings"] == [{"name": "late", "evidence": "why", "doubts_type": False}]
     assert row["peak_mag"] == {"B": None}
-    assert tuple(row) == ESTIMATE_KEYS
+    assert tuple(row) == ESTIMATE_KEYS + PULSATION_KEYS

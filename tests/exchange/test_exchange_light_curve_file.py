@@ -141,3 +141,34 @@ def test_any_text_is_read_or_refused_in_one_sentence(tmp_path, body):
         sentence = ""
         assert all(np.isfinite(curve.mjd).all() for _, curve in curves)
     assert sentence.isprintable()
+
+
+def test_sources_and_passbands_are_read(tmp_path):
+    text = f"""{HEADER},source,passbands
+A,60000,B,15,0.1,,,,
+A,60001,B,15,0.1,,,Beacon Hill,unknown
+A,60002,B,15,0.1,,,\x1b[2JBeacon,known
+"""
+    ((_, curve),) = read(tmp_path, text)
+    assert curve.source.tolist()[:2] == ["", "Beacon Hill"]
+    assert "\x1b" not in curve.source[2]
+    assert curve.by_colour_terms.tolist() == [False, True, False]
+    with pytest.raises(LightCurveFileError, match="neither known nor unknown"):
+        read(tmp_path, f"{HEADER},passbands\nA,60000,B,15,0.1,,,perhaps\n")
+
+
+def test_a_cepheid_with_all_that_is_known_of_it(tmp_path):
+    text = f"""{HEADER},kind,bjd_tdb,metallicity_dex,metallicity_err,relation
+Korab b,60010.25,V,15.2,0.02,,0.03,cepheid,2460010.7531,-0.3,0.1,OGLE-III LMC
+Korab b,60012.25,V,15.4,0.02,,0.03,cepheid,,-0.3,0.1,OGLE-III LMC
+"""
+    ((target, curve),) = read(tmp_path, text)
+    assert (target.kind, target.metallicity_dex, target.metallicity_err) == ("cepheid", -0.3, 0.1)
+    assert target.relation == "OGLE-III LMC"
+    assert curve.bjd_tdb[0] == 2460010.7531
+    assert math.isnan(curve.bjd_tdb[1])
+
+
+def test_an_unknown_kind_is_one_sentence(tmp_path):
+    with pytest.raises(LightCurveFileError, match="line 2, column kind: 'comet' is not one of type_ia, cepheid"):
+        read(tmp_path, f"{HEADER},kind\nKorab b,60010.25,V,15.2,0.02,,,comet\n")

@@ -3,8 +3,10 @@
 from __future__ import annotations
 
 import gzip
+import io
 import os
 import sys
+import time
 import tracemalloc
 from pathlib import Path
 
@@ -18,7 +20,8 @@ sys.path.insert(0, str(Path(__file__).parents[1] / "frames"))
 from frame_files import SETTINGS, bytes_of, counts, header_of, raw_header, write, write_gzip
 
 from reduce.frames.arrival import completeness
-from reduce.frames.reader import frame_id, inspect_file, open_frame
+from reduce.frames.inspection import inspect_file
+from reduce.frames.reader import frame_id, open_frame
 from reduce.records import FrameError
 
 WHOLE = bytes_of(fits.PrimaryHDU(counts(100, 100), header_of()))
@@ -62,7 +65,7 @@ def basic(nx: object, ny: object, bitpix: object = 16, naxis: object = 2, *more:
         (b"SIMPLE  = " + b" " * 2880 * 2, "cut short"),
         (b"SIMPLE  =                    T".ljust(2880) * 4100, "has no end"),
         (basic(1_000_000, 1_000_000), "cannot be true"),
-        (basic(30_000, 30_000), "holds 2880 of 1800002880 bytes"),
+        (basic(20_000, 20_000), "holds 2880 of 800003520 bytes"),
         (basic(-5, 100), "NAXIS1 = -5"),
         (basic("many", 100), "NAXIS1 is not a whole number"),
         (basic(10**30, 100), "damaged"),
@@ -70,7 +73,9 @@ def basic(nx: object, ny: object, bitpix: object = 16, naxis: object = 2, *more:
         (basic(10, 10, 16, 99999), "NAXIS"),
         (basic(0, 0), "no pixels"),
         (raw_header(f"SIMPLE  = {'T':>20}", f"BITPIX  = {8:20}", f"NAXIS   = {0:20}"), "holds no image"),
-        (bytes_of(fits.PrimaryHDU(np.zeros((3, 20, 30), np.int16))), "cube of 30 × 20 × 3"),
+        (bytes_of(fits.PrimaryHDU(np.zeros((4, 20, 30), np.int16))), "cube of 30 × 20 × 4"),
+        (bytes_of(fits.PrimaryHDU(np.zeros((3, 20, 30), np.int16))), "three colour planes"),
+        (bytes_of(fits.PrimaryHDU(np.zeros((20, 30, 3), np.int16))), "three colour planes"),
         (bytes_of(fits.PrimaryHDU(np.zeros(100, np.int16))), "row of numbers"),
         (bytes_of(fits.PrimaryHDU(np.full((20, 20), np.nan, np.float32))), "no number at all"),
         (basic(10, 10, 17) + bytes(2880), "damaged"),
@@ -155,6 +160,91 @@ def test_a_lying_header_costs_no_memory(tmp_path, content):
 def test_a_packed_bomb_is_stopped_at_its_header(tmp_path):
     path = write_gzip(tmp_path / "a.fits.gz", basic(1_000_000, 1_000_000) + bytes(50_000_000))
     assert "cannot be true" in sentence(path)
+
+
+def test_a_packed_bomb_whose_header_is_true_is_stopped_too(tmp_path):
+    path = write_gzip(tmp_path / "a.fits.gz", basic(10_000, 10_000) + bytes(200_002_560))
+    tracemalloc.start()
+    assert "would unpack from 0.194 to 200 MB" in sentence(path)
+    _, peak = tracemalloc.get_traced_memory()
+    tracemalloc.stop()
+    assert peak < 2_000_000
+
+
+def test_what_lies_behind_the_image_of_a_packed_file_is_not_kept(tmp_path):
+    content = bytes_of(fits.PrimaryHDU(counts(100, 100), header_of()))
+    path = write_gzip(tmp_path / "a.fits.gz", content + bytes(30_000_000))
+    frame = open_frame(path, SETTINGS)
+    tracemalloc.start()
+    np.testing.assert_array_equal(frame.read(), counts(100, 100).astype(np.float32))
+    _, peak = tracemalloc.get_traced_memory()
+    tracemalloc.stop()
+    assert peak < 5_000_000
+
+
+@pytest.mark.parametrize(
+    ("cards", "words"),
+    [
+        ((f"PCOUNT  = {10**14:20}",), "cut short"),
+        ((f"GCOUNT  = {10**14:20}",), "cut short"),
+        ((f"PCOUNT  = {10**17:20}",), "PCOUNT = 100000000000000000"),
+        ((f"NAXIS   = {10**9:20}",), "states NAXIS twice"),
+        ((f"naxis1  = {10**9:20}",), "states NAXIS1 twice"),
+        ((f"BITPIX  = {-64:20}",), "states BITPIX twice"),
+    ],
+)
+def test_a_header_that_contradicts_itself(tmp_path, cards, words):
+    assert words in sentence(put(tmp_path / "a.fits", basic(10, 10, 16, 2, *cards) + bytes(2880)))
+
+
+def test_a_frame_of_2_147_483_648_columns(tmp_path):
+    assert "cannot be true" in sentence(put(tmp_path / "a.fits", basic(2**31, 1000, 64) + bytes(2880)))
+
+
+@pytest.mark.parametrize("value", ["0.0", "NaN", "1E400", "'none'"])
+def test_a_scale_that_is_no_number(tmp_path, value):
+    content = basic(10, 10, 16, 2, f"BSCALE  = {value:>20}") + bytes(2880)
+    found = inspect_file(put(tmp_path / "a.fits", content), SETTINGS)
+    assert found["usable"] or found["reason"].endswith(".")
+    if found["usable"]:
+        image = open_frame(tmp_path / "a.fits", SETTINGS).read()
+        assert (image[np.isfinite(image)] == 0).all()
+
+
+def test_a_million_cards(tmp_path):
+    path = put(tmp_path / "a.fits", basic(10, 10, 16, 2, *(f"KEY{k:5}= {k:20}" for k in range(100_000))))
+    started = time.perf_counter()
+    assert "more than 36000 cards" in sentence(path)
+    assert time.perf_counter() - started < 2.0
+
+
+def test_as_many_cards_as_are_allowed(tmp_path):
+    cards = [f"K{k:<7}= {k:20}" for k in range(35_000)]
+    path = put(tmp_path / "a.fits", basic(10, 10, 16, 2, *cards, "IMAGETYP= 'dark'") + bytes(2880))
+    started = time.perf_counter()
+    assert open_frame(path, SETTINGS).info.kind == "dark"
+    assert time.perf_counter() - started < 5.0
+
+
+def test_random_groups_are_no_image(tmp_path):
+    cards = ("GROUPS  =                    T", "PCOUNT  =                    2", "GCOUNT  =                    3")
+    content = basic(0, 10, -32, 2, *cards) + bytes(2880)  # FITS 4.0, section 6: 3 groups of 2 parameters and 10 numbers
+    assert "random groups of an interferometer" in sentence(put(tmp_path / "a.fits", content))
+
+
+@pytest.mark.parametrize(
+    ("start", "name"), [(b"BZh91AY", "bzip2"), (b"\xfd7zXZ\0", "xz"), (b"PK\x03\x04", "zip"), (b"\x1f\x9d", "compress")]
+)
+def test_other_packings_are_named(tmp_path, start, name):
+    assert f"packed by {name}; unpack it" in sentence(put(tmp_path / "a.fits", start + bytes(5000)))
+
+
+def test_tiles_that_lie_outside_the_file(tmp_path):
+    content = bytearray(bytes_of(fits.PrimaryHDU(), fits.CompImageHDU(counts(100, 100), header_of())))
+    with fits.open(io.BytesIO(bytes(content)), disable_image_compression=True) as units:
+        at = units[1].fileinfo()["datLoc"]
+    content[at : at + 4] = (2_000_000_000).to_bytes(4, "big")  # bytes of the first tile
+    assert "tiles of its compressed image lie outside it" in sentence(put(tmp_path / "a.fits.fz", bytes(content)))
 
 
 @settings(max_examples=150, deadline=None, suppress_health_check=[HealthCheck.function_scoped_fixture])

@@ -10,7 +10,8 @@ import pytest
 from frame_files import write
 
 from reduce.frames.calibrate import calibrate
-from reduce.frames.master_sets import ChosenMasters, Master, choose_masters, plan_masters
+from reduce.frames.master_plans import plan_masters
+from reduce.frames.master_sets import ChosenMasters, Master, choose_masters
 from reduce.frames.masters import build_master
 from reduce.frames.reader import frame_id, open_frame
 from reduce.records import CalibratedImage, FrameError, FrameInfo, PixelFlag

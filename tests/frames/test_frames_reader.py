@@ -13,7 +13,8 @@ import pytest
 from astropy.io import fits
 from frame_files import SETTINGS, bytes_of, counts, header_of, raw_header, write, write_gzip
 
-from reduce.frames.reader import frame_id, inspect_file, iso_time, open_frame
+from reduce.frames.inspection import inspect_file
+from reduce.frames.reader import frame_id, iso_time, open_frame
 from reduce.records import FrameError
 
 
@@ -97,11 +98,11 @@ def test_an_unpadded_last_block_is_whole(tmp_path):
     check(path, counts(50, 50))
 
 
-def test_overscan_is_cut_off_and_said(tmp_path):
+def test_overscan_is_subtracted_and_said(tmp_path):
     data = counts()
     path = write(tmp_path / "a.fits", data, TRIMSEC="[3:38, 2:30]", BIASSEC="[39:40,1:30]")
     check(path, data[1:30, 2:38])
-    assert "overscan was cut off" in " ".join(open_frame(path, SETTINGS).info.notes)
+    assert "overscan was subtracted and cut off" in " ".join(open_frame(path, SETTINGS).info.notes)
 
 
 @pytest.mark.parametrize(
@@ -165,7 +166,7 @@ def test_inspect_says_everything_as_plain_data(tmp_path):
         "file": str(path), "usable": True, "kind": "light", "band": "V", "filter": "V",
         "mid_time": "2024-03-11T00:00:20.000", "exposure_s": 60.0, "gain_e_per_adu": 1.4, "read_noise_e": 8.0,
         "saturation_adu": None, "nx": 40, "ny": 30, "binning": [2, 2], "temperature_c": -20.0, "camera": "cam",
-        "object": "Field 7", "reason": "",
+        "object": "Field 7", "calibrated": [], "reason": "",
     }  # fmt: skip
 
 

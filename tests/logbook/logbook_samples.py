@@ -8,6 +8,7 @@ from datetime import UTC, datetime, timedelta
 
 import numpy as np
 
+from reduce.logbook.host_light import HostRow
 from reduce.records import (
     N_RADII,
     STAR_DTYPE,
@@ -18,7 +19,9 @@ from reduce.records import (
     FitCurve,
     FitPoint,
     FrameInfo,
+    HostLight,
     Measured,
+    Point,
     Quality,
     Sequence,
     Target,
@@ -86,6 +89,11 @@ def target(z: float | None = 0.01) -> Target:
     return Target("SN demo", "type_ia", 150.0, 20.0, z=z, ebv_mw=0.03)
 
 
+def host_row(inputs: str = "i", rows: int = 1, note: str = "seen") -> HostRow:
+    light = HostLight("reference", 12.5, (note,))
+    return HostRow(frame_id(0), "r1", "SN Test", inputs, light, stars(5)[:rows])
+
+
 def estimate(mu: float | None = 33.0) -> Estimate:
     return Estimate(
         target="SN demo", kind="type_ia", mu=mu, mu_err=0.15, mu_err_fit=0.1, t_max=61010.0, t_max_err=0.2,
@@ -95,4 +103,13 @@ def estimate(mu: float | None = 33.0) -> Estimate:
         budget=(BudgetLine("fit", 0.1), BudgetLine("zp", 0.05, "x")),
         curves=(FitCurve("V", np.array([1.0, 2.0]), np.array([15.0, np.nan]), np.array([0.1, 0.2])),),
         points=(FitPoint("2026-03-01", "V", 61000.0, -3.0, 0.01, 0.02, False),), peak_mag={"B": 15.0},
+    )  # fmt: skip
+
+
+def imported_point(night: int = 0, source: str = "Beacon Hill") -> Point:
+    when = f"2026-03-{night + 1:02d} {source}"
+    return Point(
+        star="SN demo", file=None, night=when, band="V", mjd=61100.25 + night, bjd_tdb=None, mag=15.2, err=0.02,
+        err_night=None, err_band=None, flux=8317.6, flux_err=153.2, state="kept", flags=("imported",),
+        zp_group=f"{source}/V/{when}", source=source,
     )  # fmt: skip

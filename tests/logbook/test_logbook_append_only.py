@@ -3,7 +3,7 @@
 import sqlite3
 
 import pytest
-from logbook_samples import estimate, frame_id, measured, no_mounts, sequence, target
+from logbook_samples import estimate, frame_id, host_row, imported_point, measured, no_mounts, sequence, target
 
 from reduce.logbook.database import Database, LogbookError
 from reduce.logbook.decisions import STATE, frame_subject
@@ -24,6 +24,8 @@ def full(logbook, tmp_path):
     logbook.note("t", "x", "ann")
     logbook.add_estimate(estimate(), "d", "first")
     logbook.set_setting("k", "v")
+    logbook.add_host_rows([host_row()])
+    logbook.add_imported([imported_point()])
     return logbook
 
 
@@ -72,6 +74,24 @@ def test_an_older_form_is_renewed_after_a_copy(full):
         assert saved.execute("SELECT * FROM reduction").fetchall() == before["reduction"]
     finally:
         saved.close()
+
+
+def test_a_logbook_of_the_first_form_takes_host_light(tmp_path):
+    path = tmp_path / "logbook.db"
+    Database(path, create=True, mounts=no_mounts, migrations=MIGRATIONS[:1]).close()
+    with Logbook.open(tmp_path, mounts=no_mounts) as book:
+        book.add_frame(frame_id(0), {})
+        book.add_host_rows([host_row()])
+        assert len(book.host_rows_done()) == 1
+
+
+def test_a_logbook_of_the_second_form_takes_points_of_others(tmp_path):
+    path = tmp_path / "logbook.db"
+    Database(path, create=True, mounts=no_mounts, migrations=MIGRATIONS[:2]).close()
+    with Logbook.open(tmp_path, mounts=no_mounts) as book:
+        assert book.add_imported([imported_point(0), imported_point(1)]) == 2
+        assert book.add_imported([imported_point(1), imported_point(2)]) == 1  # the same point is kept once
+        assert book.imported() == [imported_point(0), imported_point(1), imported_point(2)]
 
 
 def test_a_migration_that_fails_changes_nothing(full):

@@ -48,7 +48,7 @@ def test_decisions_add_up_to_choices(logbook):
     ("subject", "aspect", "value", "match"),
     [
         (frame_subject("f"), STATE, "lost", "not one of kept, doubtful, dropped"),
-        (band_subject("V"), APERTURE, "7", "not one of 0.6"),
+        (band_subject("V"), APERTURE, "7", "not one of 0, 0.6"),
         (band_subject("u"), APERTURE, "1.5", "not one of the bands"),
         (star_subject("s"), STATE, "kept", "a star has no state"),
         ("f1", STATE, "kept", "subject"),

@@ -13,6 +13,7 @@ from hypothesis import strategies as st
 from logbook_samples import (
     estimate,
     frame_id,
+    host_row,
     info,
     measured,
     no_mounts,
@@ -381,3 +382,15 @@ def test_a_folder_that_cannot_be_written_is_opened_for_reading(tmp_path, monkeyp
         assert "cannot be written here" in book.notice
         with pytest.raises(LogbookError):
             book.note("", "lost", "me")
+
+
+def test_rows_without_host_come_back(logbook):
+    logbook.add_frame(frame_id(0), {})
+    refused = host_row("j", rows=0, note="the stamp does not reach it")
+    logbook.add_host_rows([host_row("i"), refused, host_row("k")])
+    logbook.add_host_rows([host_row("i", note="another")])
+    found = logbook.host_rows({"i", "j"})
+    assert {key[3] for key in found} == {"i", "j"}
+    for made in (host_row("i"), refused):
+        same(found[made.frame, made.recipe, made.target, made.inputs], made)
+    assert {key[3] for key in logbook.host_rows_done()} == {"i", "j", "k"}

@@ -43,7 +43,7 @@ def test_what_comes_back(frame) -> None:
     content = pack(image, table, FWHM, SOLUTION)
     found = unpack(content)
     assert [stamp.target for stamp in found.stamps[:3]] == ["Example A", "Example B", ""]
-    assert len(found.stamps) == 32
+    assert len(found.stamps) == 42
     assert found.cd_deg == SOLUTION.cd_deg
     for stamp in found.stamps:
         ny, nx = stamp.data_e.shape

@@ -64,6 +64,11 @@ def test_the_same_frame_twice_is_bit_equal(demo, recipe):
     assert_bit_equal(one, two)
 
 
+def test_what_calibration_lacked_stays_with_the_frame(demo, recipe):
+    notes = measure(demo, recipe).info.notes
+    assert any("neither bias nor dark was subtracted" in note for note in notes)
+
+
 def test_one_or_two_workers_write_the_same_bits(demo, tmp_path):
     rows = []
     for workers in (1, 2):

@@ -22,7 +22,7 @@ def test_every_example_of_the_starter_is_valid():
     lines = starter().split("\n\n", 1)[1].splitlines()
     settings = parse_settings("\n".join(re.sub(r"^# ", "", line) for line in lines))
     assert settings.site is not None
-    for model in (settings.site, settings.telescope, settings.camera, settings.photometry):
+    for model in (settings.site, settings.telescope, settings.camera, settings.frames, settings.photometry):
         assert model.model_fields_set == set(type(model).model_fields), model
     assert settings.filters == {"Slot 3": "V"}
 

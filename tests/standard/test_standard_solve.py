@@ -23,7 +23,7 @@ from synthetic_nights import (
     with_quality,
 )
 
-from reduce.records import Choices, Measured, StarFlag
+from reduce.records import PSF_COLUMN, Choices, Measured, StarFlag
 from reduce.settings import Photometry, Settings
 from reduce.standard.aperture import best_radius, position_loss_mag
 from reduce.standard.frame_stars import frame_stars
@@ -226,7 +226,8 @@ def test_spoiled_and_saturated_stars_stay_out() -> None:
     measured.stars["flags"][4] = int(StarFlag.CROWDED)
     stars = frame_stars(measured, field.sequence, "night")
     assert np.isnan(stars.mag[[2, 3]]).all()
-    assert np.isfinite(stars.mag[4]).all()
+    assert np.isfinite(stars.mag[4, :PSF_COLUMN]).all()
+    assert np.isnan(stars.mag[4, PSF_COLUMN]), "error 0: not measured"
     solution = solve_standard([measured], field.sequence, Choices(), SETTINGS)
     words = {star.star: (star.word, star.reason) for star in solution.stars}
     assert words["s02"] == ("spare", "saturated")
@@ -241,7 +242,7 @@ def test_two_sequence_stars_never_share_one_measurement() -> None:
     ra[7], dec[7] = ra[2], dec[2] + 0.6 / 3600
     measured = measure(replace(SHOTS[1], lost=(7,)), field, rng)
     stars = frame_stars(measured, replace(sequence, ra_deg=ra, dec_deg=dec), "night")
-    assert np.isfinite(stars.mag[2]).all()
+    assert np.isfinite(stars.mag[2, :PSF_COLUMN]).all()
     assert np.isnan(stars.mag[7]).all()
 
 

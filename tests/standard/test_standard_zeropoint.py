@@ -216,3 +216,17 @@ def test_understated_photon_errors_are_scaled_by_chi2() -> None:
     chi2_dof = np.sum(((z - z.mean()) / err) ** 2) / 19
     assert 1.3 < chi2_dof < 1.9  # scaled, and too little to be called patchy
     assert got.zp_err_mag[0] == pytest.approx(0.01 / 20**0.5 * chi2_dof**0.5, rel=1e-3)
+
+
+def test_a_frame_s_zero_point_is_as_good_as_its_photons_allow() -> None:
+    ratio, stated = [], []
+    for seed in range(40):
+        made = Set(seed, frames=40, stars=20, term=0.0)
+        got = made.solve(term=0.0)
+        allowed = 1 / np.sqrt(np.sum(made.err**-2.0, axis=1))
+        error = got.zp_mag - made.zp
+        ratio += list((error - error.mean()) / allowed * np.sqrt(40 / 39))
+        stated += list(got.zp_err_mag / allowed)
+    # 1600 frames: 1 within 0.018 by chance.
+    assert np.sqrt(np.mean(np.square(ratio))) < 1.05
+    assert 1.0 <= np.mean(stated) < 1.08

@@ -4,11 +4,14 @@ from __future__ import annotations
 
 import asyncio
 import math
+from collections.abc import Mapping
 from dataclasses import replace
 from pathlib import Path
 
 import numpy as np
+from invented_plan import invented_plan
 
+from reduce.measure.profile import radial_profile
 from reduce.plain_text import PlainError
 from reduce.records import (
     LADDER_FWHM,
@@ -16,6 +19,7 @@ from reduce.records import (
     Caution,
     ColourTerm,
     Estimate,
+    FieldSolution,
     FitCurve,
     FitPoint,
     FrameZeroPoint,
@@ -23,8 +27,24 @@ from reduce.records import (
     StarResult,
     Target,
 )
-from reduce.views import STEPS, EstimateRow, FrameRow, LogRow, SequenceStar, Snapshot, Step, TargetView
-from tui.preview_image import PreviewImage, shrink
+from reduce.views import (
+    STEPS,
+    AfterSlew,
+    BandProgress,
+    EstimateRow,
+    FilterRow,
+    FrameRow,
+    LogRow,
+    Plan,
+    RadialProfile,
+    SequenceStar,
+    SetupView,
+    Snapshot,
+    StarReading,
+    Step,
+    TargetView,
+)
+from tui.preview_image import Laid, PreviewImage, Window, pasted, shrink
 
 BANDS = ("B", "V", "R", "I")
 T_MAX = 63000.3
@@ -175,6 +195,7 @@ def invented_frames(name: str, other: str) -> list[FrameRow]:
                     zero_point=FrameZeroPoint("f", band, 22.413, 0.006, 9, 1.1, 0.012, 0.002, 1.5),
                     pixel={name: (260.0, 250.0), "C1": (120.0, 400.0), "C2": (400.0, 130.0)},
                     growth_mag=tuple(-0.9 * math.exp(-1.7 * r) for r in LADDER_FWHM),
+                    solution=FieldSolution((188.91, 12.04), (256.0, 256.0), ((-2.1e-4, 0.0), (0.0, 2.1e-4)), 40, 0.1),
                 )
             )
     empty = {"band": None, "mjd": None, "night": "", "exposure_s": None, "state": None, "provisional": False}
@@ -327,10 +348,43 @@ def invented_snapshot(name: str = "Vesna 7") -> Snapshot:
         ),
         colour_terms=tuple(ColourTerm("kamera", b, 0.041, 0.007, 0.8, 9, True) for b in BANDS),
         stars=invented_stars(),
-        sequence=tuple(SequenceStar(f"C{i}", 188.9, 12.0, {"V": 12.8}) for i in range(1, 12)),
+        sequence=tuple(SequenceStar(f"C{i}", 188.85 + 0.01 * i, 12.1 - 0.01 * i, {"V": 12.8}) for i in range(1, 12)),
         log=log,
         notes=("Flats of the last night are missing: take them at dawn.",),
+        setup=invented_setup(),
+        after_slew=AfterSlew(
+            frame="117" + "a" * 61,
+            file="n11_I_1.fits",
+            target=name,
+            band="I",
+            outcome="measured",
+            reason="",
+            offset_arcmin=0.4,
+            rotation_deg=179.8,
+            peak_adu=16120.0,
+            limit_adu=52000.0,
+            too_bright=False,
+            bands=(
+                *(BandProgress(band, 2, 140.0, 50.0) for band in "BVR"),
+                BandProgress("I", 1, 31.2, 50.0),
+            ),
+            advice="go on in I: about 2 more like this",
+        ),
     )
+
+
+def invented_setup() -> SetupView:
+    """A site, a camera and a filter that has no band."""
+    filters = (*(FilterRow(band, band, 24, False) for band in BANDS), FilterRow("Slot 5", None, 3, False))
+    settings = {
+        "site.position": "46.2, 14.5, 410",
+        "site.name": "Hrib observatory",
+        "telescope.aperture_m": "0.3",
+        "camera.name": "kamera",
+        "camera.overrides_header": "no",
+    }
+    notes = ("Comparison sequence of 11 stars (B 11, V 11, R 11, I 11).",)
+    return SetupView(settings, "/frames", "", filters, "comparison", notes)
 
 
 class FakeDesk:
@@ -343,6 +397,10 @@ class FakeDesk:
         self.undone: list[Snapshot] = []
         self.refuse: dict[str, Exception] = {}
         self.snapshots_made = 0
+        self.previews: list[tuple[str, Window | None, str]] = []
+        self.plans_made = 0
+        self.changes: list[tuple[str, str]] = []
+        self.added: list[dict[str, str]] = []
 
     def _maybe_refuse(self, name: str) -> None:
         if name in self.refuse:
@@ -357,6 +415,11 @@ class FakeDesk:
         self.snapshots_made += 1
         return self.now
 
+    async def plan(self) -> Plan:
+        self._maybe_refuse("plan")
+        self.plans_made += 1
+        return invented_plan(self.now)
+
     def change(self, **changes: object) -> None:
         """A new snapshot with these fields."""
         self.now = replace(self.now, stamp=self.now.stamp + 1, **changes)
@@ -366,10 +429,10 @@ class FakeDesk:
         self.decisions.append((subject, aspect, value))
         self.undone.append(self.now)
         kind, _, rest = subject.partition(":")
-        if kind == "frame":
+        if kind in ("frame", "frames"):
             state = "kept" if value == "keep" else "dropped"
             self.change(frames=tuple(
-                replace(f, state=state, by_person=True) if f.id == rest else f for f in self.now.frames
+                replace(f, state=state, by_person=True) if f.id in rest.split(",") else f for f in self.now.frames
             ))  # fmt: skip
         elif kind == "star":
             self.change(stars=tuple(
@@ -407,14 +470,62 @@ class FakeDesk:
         self._maybe_refuse("search_log")
         return tuple(row for row in self.now.log if text.lower() in row.body.lower())
 
-    async def preview(self, path: str, nx: int, ny: int) -> PreviewImage:
+    async def change_setup(self, subject: str, typed: str) -> str:
+        self._maybe_refuse("change_setup")
+        self.changes.append((subject, typed))
+        kind, _, key = subject.partition(":")
+        if kind == "setting":
+            settings = {**self.now.setup.settings, key: typed}
+            filters = tuple(
+                replace(row, band=typed or None, named=True) if key == f"filters.{row.name}" else row
+                for row in self.now.setup.filters
+            )
+            self.change(setup=replace(self.now.setup, settings=settings, filters=filters))
+        return f"{subject}: {typed}"
+
+    async def add_target(self, facts: Mapping[str, str]) -> str:
+        self._maybe_refuse("add_target")
+        self.added.append(dict(facts))
+        return f"{facts['name']} is followed from now on."
+
+    async def preview(
+        self, path: str, nx: int, ny: int, window: Window | None = None, laid: Laid | None = None
+    ) -> PreviewImage:
         if "half" in path:
             raise PlainError("half.fits holds 4196160 of 8392320 bytes: copy it again.")
         await asyncio.sleep(0)
-        return shrink(invented_sky(), nx, ny)
+        self.previews.append((path, window, laid.path if laid is not None else ""))
+        return shrink(invented_sky() if laid is None else invented_sky()[::-1], nx, ny, window)
+
+    async def difference(
+        self, frame: str, target: str, size: tuple[int, int], nx: int, ny: int, window: Window | None = None
+    ) -> PreviewImage:
+        self._maybe_refuse("difference")
+        self.previews.append((frame, window, "difference"))
+        return shrink(pasted(invented_sky()[200:300, 200:300], 200, 200, size), nx, ny, window)
+
+    async def star_readings(self, frame: str) -> tuple[StarReading, ...]:
+        self._maybe_refuse("star_readings")
+        return invented_readings(self.now.targets[0].target.name)
+
+    async def profile(self, path: str, x_px: float, y_px: float, radius_px: float) -> RadialProfile:
+        return radial_profile(invented_sky(), x_px, y_px, radius_px)
 
     def close(self) -> None:
         self.refuse.clear()
+
+
+def invented_readings(name: str) -> tuple[StarReading, ...]:
+    """The target, two comparison stars and one without a name."""
+    growth = tuple(0.9 * math.exp(-1.7 * r) for r in LADDER_FWHM)
+    places = {name: (260.0, 250.0), "C1": (120.0, 400.0), "C2": (400.0, 130.0), "": (300.4, 301.2)}
+    return tuple(
+        StarReading(
+            star, star == name, x, y, 15.2 + 0.4 * k, 0.01 + 0.01 * k, 90.0 - 20 * k, 4213.0, 2.9, 1.06,
+            ("saturated",) if star == "C2" else (), growth,
+        )
+        for k, (star, (x, y)) in enumerate(places.items())
+    )  # fmt: skip
 
 
 def invented_sky() -> np.ndarray:
@@ -422,9 +533,9 @@ def invented_sky() -> np.ndarray:
     rng = np.random.default_rng(3)
     image = rng.normal(300.0, 12.0, (512, 512)).astype(np.float32)
     x_grid, y_grid = np.arange(512.0), np.arange(512.0)
-    for _ in range(90):
-        x, y = rng.uniform(10, 502, 2)
-        flux = 10 ** rng.uniform(3.3, 5.8)
+    named = [(260.0, 250.0, 4.6), (120.0, 400.0, 5.2), (400.0, 130.0, 5.0), (300.4, 301.2, 4.3)]
+    for x, y, size in [*named, *((*rng.uniform(10, 502, 2), rng.uniform(3.3, 5.8)) for _ in range(90))]:
+        flux = 10**size
         star = np.exp(-((y_grid - y) ** 2) / 12.5)[:, None] * np.exp(-((x_grid - x) ** 2) / 12.5)[None, :]
         image += (flux / 39.0 * star).astype(np.float32)
     return image

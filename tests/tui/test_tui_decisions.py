@@ -96,7 +96,7 @@ async def test_aperture_is_chosen_for_the_shown_band() -> None:
         await settle(pilot)
         await pilot.press("3", "b", "a")
         await settle(pilot)
-        await pilot.press("down", "down", "down", "enter")
+        await pilot.press("down", "down", "down", "down", "enter")
         await settle(pilot)
         assert app.desk.decisions == [("aperture:R", "fwhm", "1")]
         await pilot.press("a", "escape")

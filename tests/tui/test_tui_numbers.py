@@ -11,7 +11,7 @@ from hypothesis import strategies as st
 
 from tui.estimate_panel import distance_mpc
 from tui.number_text import number, ut, with_error
-from tui.preview_image import grey_levels, shrink
+from tui.preview_image import Stretch, brightness, grey_levels, shrink, stretch_of
 from tui.screens.frames import shortened
 from tui.screens.light_curve import drawn_mag, marker
 
@@ -67,8 +67,9 @@ def test_shrinking_loses_no_star(frame_ny: int, frame_nx: int, nx: int, ny: int)
 def test_greys_rise_with_brightness_and_survive_nan() -> None:
     data = np.linspace(0, 1000, 400).reshape(20, 20).astype(np.float32)
     data[3, 3] = np.nan
-    level = grey_levels(data, 16)
+    level = grey_levels(brightness(data, Stretch(100.0, 10.0, 900.0), 1.0), 16)
     assert level.min() == 0
     assert level.max() == 15
     assert np.all(np.diff(np.delete(level.ravel(), 63)) >= 0)
-    assert grey_levels(np.full((2, 2), np.nan, np.float32), 16).tolist() == [[0, 0], [0, 0]]
+    empty = np.full((2, 2), np.nan, np.float32)
+    assert grey_levels(brightness(empty, stretch_of(empty), 1.0), 16).tolist() == [[0, 0], [0, 0]]

@@ -24,7 +24,7 @@ async def test_screen_looks_as_agreed(mode: str, size: tuple[int, int]) -> None:
         check_golden(f"{mode}_{size[0]}x{size[1]}", screen_text(app))
 
 
-@pytest.mark.parametrize("mode", ["frames", "light_curve", "distance"])
+@pytest.mark.parametrize("mode", ["frames", "light_curve", "distance", "plan"])
 async def test_plain_characters_are_all_ascii_where_drawn(mode: str) -> None:
     app = FadelineApp(FakeDesk())
     async with app.run_test(size=(80, 24)) as pilot:

@@ -73,3 +73,4 @@ class CampaignScreen(Screen[None]):
             status = self.query_one("#status", Static)
             status.update(Text(said.sentence, no_wrap=True, overflow="ellipsis"))
             status.set_class(said.trouble, "trouble")
+            status.set_class(said.flash, "flash")

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 from typing import TYPE_CHECKING, ClassVar
 
 from rich.text import Text
@@ -20,28 +21,42 @@ from tui.widgets.raster import Marks
 from tui.widgets.row_table import Cells, RowTable, cell
 
 if TYPE_CHECKING:
-    from collections.abc import Sequence
+    from collections.abc import Callable, Sequence
 
-    from reduce.records import StarResult
-    from reduce.views import FrameRow, Snapshot, TargetView
+    from reduce.records import StarResult, Target
+    from reduce.views import FrameRow, SequenceStar, Snapshot, TargetView
 
 _WORD_MARKERS = {"used": "o", "spare": "-", "set aside": "x"}
 
 
-def colour_marks(stars: Sequence[StarResult]) -> list[Marks]:
-    """Residual against colour: used o, spare -, set aside x."""
-    return [
-        Marks(
-            label=f"{marker} {word}",
-            colour=word_colour(word),
-            x=[s.colour for s in mine],
-            y=[s.residual_mag for s in mine],
-            err=[s.rms_mag / max(s.n_frames, 1) ** 0.5 for s in mine],
-            markers=marker * len(mine),
-        )
-        for word, marker in _WORD_MARKERS.items()
-        if (mine := [s for s in stars if s.word == word])
-    ]
+AGAINST = ("colour", "magnitude", "east", "north")
+"""What residuals are drawn against, one after the other: a slope in the first is a colour term, in the second a
+detector that is not linear or a wrong sky, in the others a flat field or a changing cloud."""
+
+
+def residual_marks(stars: Sequence[StarResult], x_of: Callable[[StarResult], float | None]) -> list[Marks]:
+    """Residuals against something: used o, spare -, set aside x."""
+    marks = []
+    for word, marker in _WORD_MARKERS.items():
+        told = [(x, s) for s in stars if s.word == word and (x := x_of(s)) is not None]
+        if told:
+            marks.append(
+                Marks(
+                    label=f"{marker} {word}",
+                    colour=word_colour(word),
+                    x=[x for x, _ in told],
+                    y=[s.residual_mag for _, s in told],
+                    err=[s.rms_mag / max(s.n_frames, 1) ** 0.5 for _, s in told],
+                    markers=marker * len(told),
+                )
+            )
+    return marks
+
+
+def offsets_arcmin(star: SequenceStar, target: Target) -> tuple[float, float]:
+    """How far a comparison star lies east and north of the target."""
+    east = (star.ra_deg - target.ra_deg + 180.0) % 360.0 - 180.0
+    return 60.0 * east * math.cos(math.radians(target.dec_deg)), 60.0 * (star.dec_deg - target.dec_deg)
 
 
 def growth_marks(frame: FrameRow | None, band: str) -> list[Marks]:
@@ -61,6 +76,7 @@ class FieldScreen(CampaignScreen):
     def __init__(self) -> None:
         super().__init__()
         self._band = ""
+        self._against = AGAINST[0]
         self._stars: dict[str, StarResult] = {}
 
     def body(self) -> ComposeResult:
@@ -68,7 +84,7 @@ class FieldScreen(CampaignScreen):
         with Horizontal(id="field-body"):
             yield RowTable("star", "word", "mag", "resid", "rms", "n", id="stars")
             with Vertical(id="field-charts"):
-                yield Chart("residual", least_y=0.04, zero_line=True, id="against-colour")
+                yield Chart("residual", least_y=0.04, zero_line=True, id="residuals-against")
                 yield Chart("growth", least_y=0.05, x_label="FWHM", id="growth")
         yield Static("", id="star-reason")
 
@@ -81,9 +97,9 @@ class FieldScreen(CampaignScreen):
         self._stars = {s.star: s for s in stars}
         self.query_one(RowTable).show([(s.star, _cells(s)) for s in stars])
         plain = self.fadeline.plain
-        index = "−".join(COLOUR_OF_BAND.get(self._band, ("", "")))
-        self.query_one("#against-colour", Chart).show(
-            colour_marks(stars), plain=plain, title=self._band, x_label=index, empty="No solution yet."
+        marks, label = self._residuals(snapshot, view, stars)
+        self.query_one("#residuals-against", Chart).show(
+            marks, plain=plain, title=self._band, x_label=label, empty="No solution yet."
         )
         kept = [f for f in snapshot.frames if f.band == self._band and f.state == "kept" and f.growth_mag]
         latest = kept[-1] if kept else None
@@ -92,9 +108,21 @@ class FieldScreen(CampaignScreen):
             growth_marks(latest, self._band),
             plain=plain,
             empty="No kept frame yet.",
-            title=f"{self._band} growth, aperture {number(used, 2)} FWHM",
+            title=f"{self._band} growth, aperture {'PSF' if used == 0 else f'{number(used, 2)} FWHM'}",
         )
         self._show_reason()
+
+    def _residuals(
+        self, snapshot: Snapshot, view: TargetView | None, stars: Sequence[StarResult]
+    ) -> tuple[list[Marks], str]:
+        """Marks of the upper chart and the label of its x axis."""
+        if self._against == "colour":
+            return residual_marks(stars, lambda s: s.colour), "−".join(COLOUR_OF_BAND.get(self._band, ("", "")))
+        if self._against == "magnitude":
+            return residual_marks(stars, lambda s: s.catalogue_mag), "mag"
+        side = ("east", "north").index(self._against)
+        offset = {s.id: offsets_arcmin(s, view.target)[side] for s in snapshot.sequence} if view is not None else {}
+        return residual_marks(stars, lambda s: offset.get(s.star)), f"{self._against}′"
 
     @on(DataTable.RowHighlighted)
     def follow_cursor(self) -> None:
@@ -126,6 +154,14 @@ class FieldScreen(CampaignScreen):
             self._band = bands[(bands.index(self._band) + 1) % len(bands)] if self._band in bands else bands[0]
             self.draw()
 
+    def action_next_axis(self) -> None:
+        """Draw the residuals against the next thing."""
+        self._against = AGAINST[(AGAINST.index(self._against) + 1) % len(AGAINST)]
+        is_place = self._against not in AGAINST[:2]
+        what = f"the place {self._against} of the target, in arcmin" if is_place else self._against
+        self.fadeline.say(f"Residuals against {what}.")
+        self.draw()
+
     def action_set_aside(self) -> None:
         """Set the chosen star aside in all bands, or use it again."""
         star = self._stars.get(self.query_one(RowTable).chosen())
@@ -141,16 +177,16 @@ class FieldScreen(CampaignScreen):
         if not self._band:
             self.fadeline.say("There is no band yet to choose an aperture for.")
             return
-        from tui.screens.aperture import ApertureScreen
+        from tui.screens.choice import ChoiceScreen
 
         band = self._band
+        words = {"auto": "by signal-to-noise", "0": "PSF", **{f"{r:g}": f"{r:g} FWHM" for r in LADDER_FWHM}}
 
         def chosen(value: str | None) -> None:
             if value is not None:
-                radius = "chosen by signal-to-noise" if value == "auto" else f"{value} FWHM"
-                self.fadeline.decide(f"aperture:{band}", "fwhm", value, f"Aperture of {band}: {radius}")
+                self.fadeline.decide(f"aperture:{band}", "fwhm", value, f"Aperture of {band}: {words[value]}")
 
-        self.app.push_screen(ApertureScreen(band), chosen)
+        self.app.push_screen(ChoiceScreen(f"Aperture radius in {band}", list(words.items())), chosen)
 
 
 def _bands(snapshot: Snapshot | None) -> list[str]:
@@ -161,7 +197,7 @@ def _bands(snapshot: Snapshot | None) -> list[str]:
 def _cells(star: StarResult) -> Cells:
     return (
         cell(star.star),
-        cell(star.word, word_colour(star.word)),
+        cell(star.word, "" if star.word == "used" else word_colour(star.word)),
         cell(number(star.catalogue_mag, 3), right=True),
         cell(number(star.residual_mag, 3, sign=True), right=True),
         cell(number(star.rms_mag, 3), right=True),

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import asyncio
+from dataclasses import replace
 from typing import TYPE_CHECKING, ClassVar
 
 from rich.text import Text
@@ -15,17 +16,21 @@ from tui.actions import screen_bindings
 from tui.band_look import band_colour, word_colour
 from tui.messages import trouble_sentence
 from tui.number_text import UNKNOWN, number, ut, with_error
+from tui.picture_view import rings_of, uncrowded
 from tui.screens.campaign_screen import CampaignScreen
 from tui.widgets.preview import Preview
 from tui.widgets.row_table import Cells, RowTable, cell
 
 if TYPE_CHECKING:
     from reduce.views import FrameRow, Snapshot, TargetView
+    from tui.app import FadelineApp
 
 FILTERS = ("this target", "wants you", "all frames")
 NAME_WIDTH = 16
 PREVIEW_PIXELS = 128
 """Asked for whatever the size of the widget, which shrinks it further; a resize needs no new picture."""
+SLOW_SENTENCE = "Slow link: v fetches the picture, w draws as usual again."
+CELLS_A_RING = 40
 PREVIEW_WAIT_S = 0.15
 """A picture is fetched once the cursor has rested this long."""
 
@@ -72,9 +77,24 @@ def details_text(row: FrameRow, target: str, calibration: tuple[str, ...]) -> Te
         pointing.append(f"ZP {with_error(row.zero_point.zp_mag, row.zero_point.zp_err_mag, 3)}")
     if row.outcome == "measured":
         text.append("\n" + "  ".join(parts) + "\n" + "  ".join(pointing))
+        text.append("\n" + " ".join(row.notes) if row.notes else "")
     elif row.outcome == "calibration":
         text.append("".join(f"\n{line}" for line in calibration))
     return text
+
+
+def decide_on(app: FadelineApp, row: FrameRow | None, value: str) -> None:
+    """Keep or drop a frame, or say why that cannot be."""
+    if row is None:
+        app.say("There is no frame to decide on.")
+    elif row.outcome == "calibration":
+        app.say("Keep and drop are for frames of the sky, not for calibration frames.")
+    elif row.outcome == "not used":
+        app.say(f"This frame is {row.reason}.")
+    elif row.kind == "unknown":
+        app.say("This file cannot be read: there is nothing to keep or drop.")
+    else:
+        app.decide(f"frame:{row.id}", "state", value, f"{'Kept' if value == 'keep' else 'Dropped'} {row.file}")
 
 
 class FramesScreen(CampaignScreen):
@@ -116,43 +136,58 @@ class FramesScreen(CampaignScreen):
         details, preview = self.query_one("#details", Static), self.query_one(Preview)
         if row is None:
             details.update(Text(f"No frame here ({self._filter}; f shows others)."))
-            preview.show(None, (), "", self.fadeline.plain)
+            preview.show(None, (), "", self.fadeline.picture_look)
             self._pictured = ""
             return
         snapshot = self.fadeline.snapshot
         details.update(details_text(row, self.fadeline.target_name, snapshot.calibration if snapshot else ()))
-        look = f"{row.id} {self.fadeline.plain}"
+        look = f"{row.id} {self.fadeline.picture_look} {self.fadeline.target_name} {self.fadeline.slow_link}"
         if look != self._pictured:
             self._pictured = look
+            if self.fadeline.slow_link:
+                preview.show(None, (), SLOW_SENTENCE, self.fadeline.picture_look)
+                return
             self.run_worker(self._picture(row), group="picture", exclusive=True, exit_on_error=False)
 
     async def _picture(self, row: FrameRow) -> None:
         await asyncio.sleep(PREVIEW_WAIT_S)
         preview = self.query_one(Preview)
-        plain = self.fadeline.plain or self.fadeline.plain_pictures
+        look = self.fadeline.picture_look
         try:
             image = await self.fadeline.desk.preview(row.path, PREVIEW_PIXELS, PREVIEW_PIXELS)
         except Exception as error:  # an unreadable file is a sentence in the picture's place
-            preview.show(None, (), trouble_sentence(error), plain)
+            preview.show(None, (), trouble_sentence(error), look)
             return
-        target = self.fadeline.target_name
-        rings = [(x, y, "[]", "#56b4e9") for name, (x, y) in row.pixel.items() if name not in row.targets]
-        rings += [(x, y, "()", "#e69f00") for name, (x, y) in row.pixel.items() if name == target]
-        preview.show(image, rings, "", plain)
+        # a small picture has no room for circles, nor for the brackets of a crowd: the full-screen one has
+        rings = [replace(ring, radius_px=0.0) for ring in rings_of(row, self.fadeline.target_name)]
+        preview.show(image, uncrowded(rings, image.window, preview.size.area, CELLS_A_RING), "", look)
+
+    def action_view(self) -> None:
+        """Look at the chosen frame over the whole screen."""
+        row = self._chosen()
+        if row is None or row.outcome == "unreadable":
+            self.fadeline.say("There is no picture to show." if row is None else "This file cannot be read.")
+            return
+        from tui.screens.picture import PictureScreen
+
+        self.app.push_screen(PictureScreen(list(self._rows), row.id))
 
     def action_decide_frame(self, value: str) -> None:
         """Keep or drop the chosen frame."""
-        row = self._chosen()
-        if row is None:
-            self.fadeline.say("There is no frame to decide on.")
-        elif row.outcome == "calibration":
-            self.fadeline.say("Keep and drop are for frames of the sky, not for calibration frames.")
-        elif row.kind == "unknown":
-            self.fadeline.say("This file cannot be read: there is nothing to keep or drop.")
-        else:
-            self.fadeline.decide(
-                f"frame:{row.id}", "state", value, f"{'Kept' if value == 'keep' else 'Dropped'} {row.file}"
-            )
+        decide_on(self.fadeline, self._chosen(), value)
+
+    def action_decide_shown(self, value: str) -> None:
+        """Keep or drop all doubtful frames shown, by one decision that one undo takes back."""
+        doubtful = [row for row in self._rows.values() if row.state == "doubtful" and not row.by_person]
+        if not doubtful:
+            self.fadeline.say(f"No doubtful frame is shown ({self._filter}; f shows others).")
+            return
+        if len(doubtful) == 1:
+            decide_on(self.fadeline, doubtful[0], value)
+            return
+        done = "Kept" if value == "keep" else "Dropped"
+        subject = "frames:" + ",".join(row.id for row in doubtful)
+        self.fadeline.decide(subject, "state", value, f"{done} {len(doubtful)} doubtful frames")
 
     def action_next_filter(self) -> None:
         """Show the next choice of frames."""

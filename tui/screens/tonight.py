@@ -11,6 +11,7 @@ from textual.containers import Container
 from textual.widgets import DataTable, Static
 
 from tui.actions import SCREENS, screen_bindings
+from tui.after_slew_text import after_slew_text
 from tui.band_look import band_colour, word_colour
 from tui.number_text import number, ut, with_error
 from tui.screens.campaign_screen import CampaignScreen
@@ -52,6 +53,7 @@ class TonightScreen(CampaignScreen):
         with Container(id="tonight-body"):
             yield RowTable("target", "kind", "nights", "last night", "μ", "wants", id="targets")
             yield RowTable("latest frame", "UT", "band", "s", "FWHM″", "state", id="arrivals")
+        yield Static("", id="after-slew")
         yield Static("", id="due")
 
     def show(self, snapshot: Snapshot, view: TargetView | None) -> None:
@@ -61,6 +63,9 @@ class TonightScreen(CampaignScreen):
         lights = [row for row in snapshot.frames if row.outcome != "calibration"]
         latest = sorted(lights, key=lambda row: row.mjd or 0.0, reverse=True)[:_ARRIVALS]
         self.query_one("#arrivals", RowTable).show([(row.id, _arrival_cells(row)) for row in latest])
+        line = self.query_one("#after-slew", Static)
+        line.update(after_slew_text(snapshot.after_slew))
+        line.display = snapshot.after_slew is not None
         self.query_one("#due", Static).update(due_text(snapshot, self.fadeline.target_name))
 
     @on(DataTable.RowSelected, "#targets")

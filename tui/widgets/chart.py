@@ -30,11 +30,15 @@ class Chart(Widget):
         legend: bool = True,
         x_axis: bool = True,
         zero_line: bool = False,
+        symmetric: bool = False,
+        x_wraps_at: float | None = None,
         id: str | None = None,
     ) -> None:
         super().__init__(id=id)
         self._title, self._invert_y, self._least_y = title, invert_y, least_y
         self._x_label, self._legend, self._x_axis, self._zero_line = x_label, legend, x_axis, zero_line
+        self._x_wraps_at = x_wraps_at
+        self._symmetric = symmetric
         self._marks: tuple[Marks, ...] = ()
         self._lines: tuple[Line, ...] = ()
         self._x_limits: tuple[float, float] | None = None
@@ -67,10 +71,11 @@ class Chart(Widget):
         self.refresh()
 
     def limits(self) -> Limits:
-        """Limits of the present data."""
-        found = limits_of(self._marks, self._lines, self._least_y)
-        if self._x_limits is not None:
-            return Limits(*self._x_limits, found.y0, found.y1)
+        """Limits of the present data, those of y from what is within the limits of x."""
+        found = limits_of(self._marks, self._lines, self._least_y, self._x_limits)
+        if self._symmetric:
+            reach = max(abs(found.y0), abs(found.y1))
+            return Limits(found.x0, found.x1, -reach, reach)
         return found
 
     def render_line(self, y: int) -> Strip:
@@ -131,7 +136,8 @@ class Chart(Widget):
             part = (value - limits.y0) / (limits.y1 - limits.y0)
             labels[round((part if self._invert_y else 1 - part) * (rows - 1))] = f"{value:.{decimals}f}"
         if not self._legend:
-            labels[0] = self._title
+            free = labels.index("") if "" in labels else 0
+            labels[free] = self._title
         wall, mark = ("|", "+") if self._plain else ("│", "┤")
         strips = []
         for row in range(rows):
@@ -156,7 +162,7 @@ class Chart(Widget):
         for value in values:
             column = round((value - limits.x0) / (limits.x1 - limits.x0) * (columns - 1))
             axis[column] = mark
-            label = f"{value:.{decimals}f}"
+            label = f"{value if self._x_wraps_at is None else value % self._x_wraps_at:.{decimals}f}"
             start = min(max(0, GUTTER + column - len(label) // 2), len(text) - len(label))
             if all(character == " " for character in text[max(0, start - 1) : start + len(label)]):
                 text[start : start + len(label)] = label

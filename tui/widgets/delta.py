@@ -9,6 +9,7 @@ from __future__ import annotations
 
 import os
 from collections.abc import Iterable, Iterator
+from functools import cache
 from typing import TYPE_CHECKING, Any
 
 from rich.cells import cell_len
@@ -71,6 +72,46 @@ def changed_runs(old: Row | None, new: Row) -> Iterator[tuple[int, Row]]:
         x = last + 1
 
 
+@cache
+def _parts(codes: str) -> tuple[str, str, str]:
+    """Attributes, colour of the letters and colour of the ground in the codes of one style."""
+    attributes, letters, ground = [], "", ""
+    numbers = codes.split(";") if codes else []
+    while numbers:
+        first = numbers.pop(0)
+        length = {"5": 2, "2": 4}.get(numbers[0], 0) if first in ("38", "48") and numbers else 0
+        whole = ";".join([first, *numbers[:length]])
+        numbers = numbers[length:]
+        if len(first) == 2 and first[0] in "39":
+            letters = whole
+        elif (len(first) == 2 and first[0] == "4") or (len(first) == 3 and first.startswith("10")):
+            ground = whole
+        else:
+            attributes.append(whole)
+    return ";".join(attributes), letters, ground
+
+
+_OFF = {"1": "22", "2": "22", "3": "23", "4": "24", "7": "27", "9": "29"}
+"""What ends an attribute (ECMA-48): bold and faint share theirs."""
+
+
+@cache
+def _change(old: str | None, new: str) -> str:
+    """What turns one style into another: only what differs, or everything anew where that is shorter."""
+    anew = f"\x1b[0;{new}m" if new else "\x1b[0m"
+    if old is None:
+        return anew
+    (was_on, *was), (is_on, *now) = _parts(old), _parts(new)
+    before, after = set(was_on.split(";")) - {""}, set(is_on.split(";")) - {""}
+    ended = before - after
+    if not ended <= set(_OFF) or any(one and not two for one, two in zip(was, now, strict=True)):
+        return anew
+    ends = {_OFF[one] for one in ended}
+    begins = {one for one in after if one not in before or _OFF.get(one) in ends}
+    codes = [*sorted(ends), *sorted(begins), *(two for one, two in zip(was, now, strict=True) if one != two)]
+    return min(f"\x1b[{';'.join(codes)}m", anew, key=len) if codes else ""
+
+
 def written(runs_of_rows: Iterable[tuple[int, int, Row]]) -> str:
     """Terminal text for runs (row, column, cells)."""
     out: list[str] = []
@@ -79,7 +120,7 @@ def written(runs_of_rows: Iterable[tuple[int, int, Row]]) -> str:
         out.append(f"\x1b[{y + 1};{x + 1}H")
         for character, codes in cells:
             if codes != codes_now:
-                out.append(f"\x1b[0;{codes}m" if codes else "\x1b[0m")
+                out.append(_change(codes_now, codes))
                 codes_now = codes
             out.append(character)
     return "".join(out)

@@ -56,29 +56,36 @@ class Cells:
     owner: Ints
 
 
-def limits_of(marks: Sequence[Marks], lines: Sequence[Line], least_y: float) -> Limits:
+def limits_of(
+    marks: Sequence[Marks], lines: Sequence[Line], least_y: float, x_limits: tuple[float, float] | None = None
+) -> Limits:
     """Limits that hold every finite point with its error bar, and curves as far as they stay near the points.
 
-    ``least_y`` is the smallest range of y, so that three equal points are not drawn as noise.
+    ``least_y`` is the smallest range of y, so that three equal points are not drawn as noise. Between given limits of
+    x, only what lies there counts.
     """
-    xs = [np.asarray(m.x, float)[np.isfinite(np.asarray(m.y, float))] for m in marks]
+    low_x, high_x = x_limits or (-np.inf, np.inf)
+    xs: list[Floats] = []
     ys: list[Floats] = []
     for m in marks:
-        y = np.asarray(m.y, float)
+        x, y = np.asarray(m.x, float), np.asarray(m.y, float)
         err = np.zeros_like(y) if m.err is None else np.nan_to_num(np.asarray(m.err, float))
-        ys += [y - err, y + err]
+        here = _between(x, low_x, high_x) & np.isfinite(y)
+        xs.append(x[here])
+        ys += [(y - err)[here], (y + err)[here]]
     x, y = (np.concatenate([v[np.isfinite(v)] for v in vs] or [np.zeros(0)]) for vs in (xs, ys))
     if x.size == 0:
         x = np.concatenate([np.asarray(line.x, float) for line in lines] or [np.zeros(0)])
         y = np.concatenate([np.asarray(line.y, float) for line in lines] or [np.zeros(0)])
-        x, y = x[np.isfinite(x)], y[np.isfinite(y)]
+        y, x = y[np.isfinite(y) & _between(x, low_x, high_x)], x[np.isfinite(x) & _between(x, low_x, high_x)]
     if x.size == 0 or y.size == 0:
-        return Limits(0.0, 1.0, 0.0, 1.0)
+        return Limits(*(x_limits or (0.0, 1.0)), 0.0, 1.0)
     x_pad = 0.03 * float(np.ptp(x)) or 1.0
-    near = [np.asarray(line.y, float)[_between(line.x, x.min() - x_pad, x.max() + x_pad)] for line in lines]
+    x0, x1 = x_limits or (float(x.min()) - x_pad, float(x.max()) + x_pad)
+    near = [np.asarray(line.y, float)[_between(line.x, x0, x1)] for line in lines]
     y = np.concatenate([y, *(v[np.isfinite(v)] for v in near)])
     y_pad = max(0.05 * float(np.ptp(y)), 0.5 * (least_y - float(np.ptp(y))), 1e-6)
-    return Limits(float(x.min()) - x_pad, float(x.max()) + x_pad, float(y.min()) - y_pad, float(y.max()) + y_pad)
+    return Limits(x0, x1, float(y.min()) - y_pad, float(y.max()) + y_pad)
 
 
 def _between(x: Sequence[float] | Floats, low: float, high: float) -> NDArray[np.bool_]:
@@ -87,14 +94,29 @@ def _between(x: Sequence[float] | Floats, low: float, high: float) -> NDArray[np
 
 
 def ticks(low: float, high: float, wanted: int) -> tuple[list[float], int]:
-    """Ticks at steps of 1, 2 or 5 times a power of ten inside the range, and the decimals they need."""
+    """Ticks at steps of 1, 2 or 5 times a power of ten inside the range, and the decimals they need.
+
+    At least two of them, for a single one does not say the scale.
+    """
     raw = (high - low) / max(wanted, 1)
     if not np.isfinite(raw) or raw <= 0:
         return [], 0
     power = 10.0 ** floor(log10(raw))
-    step = next(s * power for s in (1, 2, 5, 10) if s * power >= raw * (1 - 1e-9))
-    values = [i * step for i in range(ceil(low / step), floor(high / step) + 1)]
+    widest = next(s for s in (1, 2, 5, 10) if s * power >= raw * (1 - 1e-9))
+    for factor in (10, 5, 2, 1, 0.5, 0.2):
+        step = factor * power
+        values = [i * step for i in range(ceil(low / step), floor(high / step) + 1)]
+        if factor <= widest and len(values) >= 2:
+            break
     return values, max(0, -floor(log10(step) + 1e-9))
+
+
+def braille_codes(dots: NDArray[np.bool_]) -> Ints:
+    """Characters, (rows / 4, columns / 2), of a raster of dots."""
+    rows, columns = dots.shape
+    groups = dots.reshape(rows // 4, 4, columns // 2, 2).transpose(0, 2, 1, 3)
+    bits = np.where(groups, _DOT, 0).sum(axis=(2, 3), dtype=np.int32)
+    return np.where(bits > 0, 0x2800 + bits, ord(" ")).astype(np.int32)
 
 
 class Canvas:

@@ -21,12 +21,13 @@ _KINDS = {"type_ia": "type Ia", "cepheid": "Cepheid", "rr_lyrae": "RR Lyrae", "o
 
 
 class ScreenBar(Static):
-    """The six screens and their digits, the present one stressed."""
+    """The screens and their digits, the present one stressed."""
 
     def __init__(self, mode: str) -> None:
         text = Text(no_wrap=True)
         for digit, (name, shown) in enumerate(SCREENS.items(), 1):
-            text.append(f" {digit} {shown} ", "reverse bold" if name == mode else "")
+            text.append(" ")
+            text.append(f"{digit} {shown}", "reverse bold" if name == mode else "")
         super().__init__(text, id="screen-bar")
 
 

@@ -1,7 +1,8 @@
-"""A small window: the radius of the aperture of one band."""
+"""A small window: one of several ways."""
 
 from __future__ import annotations
 
+from collections.abc import Sequence
 from typing import ClassVar
 
 from rich.text import Text
@@ -12,24 +13,28 @@ from textual.screen import ModalScreen
 from textual.widgets import OptionList
 from textual.widgets.option_list import Option
 
-from reduce.records import LADDER_FWHM
 
+class ChoiceScreen(ModalScreen[str | None]):
+    """Gives the value of the way that was chosen, or None.
 
-class ApertureScreen(ModalScreen[str | None]):
-    """Gives the chosen radius in FWHM as text, ``auto``, or None."""
+    Parameters
+    ----------
+    title
+        What is chosen.
+    options
+        (value, words) of each way.
+    """
 
     BINDINGS: ClassVar = [Binding("escape", "leave", "Leave it")]
 
-    def __init__(self, band: str) -> None:
+    def __init__(self, title: str, options: Sequence[tuple[str, str]]) -> None:
         super().__init__()
-        self._band = band
+        self._title, self._options = title, options
 
     def compose(self) -> ComposeResult:
         """The choices."""
-        options = [Option(Text("by signal-to-noise"), id="auto")]
-        options += [Option(Text(f"{radius:g} FWHM"), id=f"{radius:g}") for radius in LADDER_FWHM]
-        box = OptionList(*options, id="apertures")
-        box.border_title = f"Aperture radius in {self._band}"
+        box = OptionList(*(Option(Text(words), id=value) for value, words in self._options), id="choices")
+        box.border_title = self._title
         box.border_subtitle = "enter chooses, esc leaves it"
         yield box
 
