@@ -168,7 +168,9 @@ class LightCurveScreen(CampaignScreen, inherit_bindings=False):
             lines = [Line(band_colour(c.band), c.mjd, c.mag, c.sigma_mag if with_sigma else None) for c in curves]
         curve, residuals = self.query_one("#curve", Chart), self.query_one("#residuals", Chart)
         times = (0.0, 2.0) if star else self._time
-        shown = "all bands" if not self._hidden else f"without {' '.join(sorted(self._hidden, key=_band_order))}"
+        shown = f"band {bands[0]}" if len(bands) == 1 else "all bands"
+        if self._hidden and len(bands) > 1:
+            shown = f"without {' '.join(sorted(self._hidden, key=_band_order))}"
         curve.show(
             marks_of(points, plain, star), lines, plain=plain, title=f"mag, {shown}", empty="No point yet.",
             cursor=(phase_of(chosen, star) if star else chosen.mjd, drawn_mag(chosen)) if chosen else None,
