@@ -11,7 +11,7 @@ from typing import Literal
 import click
 
 from tui.combine_command import combine
-from tui.command_line import EXIT_UNREADABLE, FILE, FOLDER, open_campaign, plainly, print_json, progress
+from tui.command_line import EXIT_UNREADABLE, FILE, FOLDER, OneSentence, open_campaign, plainly, print_json, progress
 from tui.import_command import import_points
 from tui.plan_command import advise, plan
 from tui.sequence_command import sequence, standards
@@ -218,6 +218,9 @@ def distance(
     from reduce.exchange.light_curve_file import read_light_curves
     from reduce.exchange.point_json import estimate_to_json
 
+    for number, option in ((scale_h0, "--scale-h0"), (scale_mb, "--scale-mb")):
+        if number is not None and number != number:
+            raise OneSentence(f"{option}: nan is not a number.")
     if scale_h0 is not None and scale_mb is not None:
         raise click.UsageError("Give either --scale-h0 or --scale-mb, not both.")
     if unknown := set(without_prior) - set(PRIORS):

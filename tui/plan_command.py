@@ -24,7 +24,10 @@ def _moment(night: str | None, longitude_deg: float) -> float:
     if night is None:
         return now_mjd()
     try:
-        ordinal = date.fromisoformat(night).toordinal()
+        evening = date.fromisoformat(night)
+        if not 1900 <= evening.year <= 2200:
+            raise ValueError(night)
+        ordinal = evening.toordinal()
     except ValueError as error:
         raise OneSentence("--night wants the date of the evening, such as 2025-03-06.") from error
     east = (longitude_deg + 180.0) % 360.0 - 180.0

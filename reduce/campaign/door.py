@@ -12,7 +12,7 @@ from typing import TYPE_CHECKING, Self
 from reduce.campaign.decide import decision_of
 from reduce.campaign.frames_folder import FRAMES_FOLDER
 from reduce.campaign.imports import points_of_file
-from reduce.campaign.known import CampaignError
+from reduce.campaign.known import CampaignError, refuse_reference
 from reduce.campaign.people import PROGRAM, who
 from reduce.campaign.sequences import read_usable_sequence
 from reduce.campaign.settings_file import SETTINGS_FILE, starter_text
@@ -87,6 +87,8 @@ class Campaign(Solved):
         names = [target.name for target in targets]
         if not targets or len(set(names)) != len(names):
             raise CampaignError("Give at least one target, each with a name of its own.")
+        for target in targets:
+            refuse_reference(target, frames)
         stars = read_usable_sequence(sequence)
         text = settings_text if settings_text is not None else _starter(scale_arcsec, site)
         parse_settings(text, SETTINGS_FILE)  # a mistake is said before anything is made
@@ -175,11 +177,17 @@ class Campaign(Solved):
 
     def decide(self, subject: str, aspect: str, value: str, reason: str = "") -> LogRow:
         """Append a decision in the words of the app (see `decide.decision_of`)."""
+        kind, _, name = subject.partition(":")
+        if (kind, value) == ("host", "reference") and not self.target(name).reference_folder:
+            raise CampaignError(
+                f"{clean_text(name)} has no reference: name its folder with fadeline target --reference."
+            )
         return self.book.decide(*decision_of(subject, aspect, value), reason, who())
 
     def correct_target(self, target: Target) -> bool:
         """New facts about a target; False when nothing is new."""
         before = self.target(target.name)
+        refuse_reference(target, self.frames_folder)
         if not self.book.add_target(target):
             return False
         old, new = asdict(before), asdict(target)

@@ -57,6 +57,8 @@ class Intake:
     masters_folder: Path
     standards: Sequence | None = None
     """Published standard stars; a frame that points at them is measured on them."""
+    past_reference_folders: tuple[Path, ...] = ()
+    """Named once, perhaps no more: what lies there, outside the frames folder, is never science."""
     waiting: dict[Path, str] = field(default_factory=dict)
     """File still being written → how far it is."""
     refused: dict[str, str] = field(default_factory=dict)
@@ -120,6 +122,10 @@ class Intake:
     def _is_reference(self, path: Path) -> bool:
         return any(path.is_relative_to(folder) for folder in self.reference_folders)
 
+    def _is_past_reference(self, path: Path) -> bool:
+        past = any(path.is_relative_to(folder) for folder in self.past_reference_folders)
+        return past and not path.is_relative_to(self.folder) and not self._is_reference(path)
+
     def _is_settled(self, path: Path, stamp: Stamp, now_s: float) -> bool:
         """Whether the file can be taken now; `waiting` says why not."""
         age_s = now_s - stamp[1] / 1e9
@@ -155,6 +161,8 @@ class Intake:
         places = self.book.known_locations()
         references = {place.frame for path, place in places.items() if self._is_reference(path)}
         for path, place in places.items():
+            if self._is_past_reference(path):
+                continue
             if place.frame in found and found[place.frame].path.exists():
                 continue
             if place.frame in found and not path.exists():

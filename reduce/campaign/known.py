@@ -26,6 +26,13 @@ class CampaignError(PlainError):
     """A campaign cannot be made, opened or asked this."""
 
 
+def refuse_reference(target: Target, frames_folder: Path) -> None:
+    """Refuse, in one sentence, a reference folder that holds the frames themselves."""
+    if target.reference_folder and frames_folder.resolve().is_relative_to(target.reference_folder):
+        shown = clean_text(target.reference_folder, 300)
+        raise CampaignError(f"The reference folder {shown} holds the frames folder: no frame would be science.")
+
+
 class Known:
     """The facts of one campaign, read from its folder and logbook."""
 
@@ -157,6 +164,7 @@ class Known:
                 standards=self.standards,
             )  # fmt: skip
         self._intake.folder, self._intake.reference_folders = self.frames_folder, self.reference_folders
+        self._intake.past_reference_folders = tuple(map(Path, sorted(self.book.reference_folders_ever())))
         return self._intake
 
     def wanted_recipes(self) -> dict[str, str]:

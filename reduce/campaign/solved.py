@@ -19,8 +19,12 @@ from reduce.curve.light_curve import to_light_curve
 from reduce.logbook.store import Logbook
 from reduce.pipeline import solve_points
 from reduce.plain_text import clean_text
-from reduce.records import Choices, Estimate, LightCurve, Measured, Point, Solution, Target
+from reduce.records import Caution, Choices, Estimate, LightCurve, Measured, Point, Solution, Target
 from reduce.settings import Settings
+
+MOST_NOTES = 3
+SUPERNOVA_LIGHT = "light of the supernova itself"
+"""Words of `reduce.measure.reference.supernova_light_note`."""
 
 
 class Solved(Known):
@@ -167,14 +171,14 @@ class Solved(Known):
         chosen = self.target(target)
         points = self.solution().night_points
         if assumptions is not None and assumptions != assumptions_of(self.settings):
-            return estimate_target(chosen, points, assumptions)
+            return self._with_host_cautions(estimate_target(chosen, points, assumptions))
         assumptions = assumptions_of(self.settings)
         digest = inputs_digest(chosen, points, assumptions)
         stored = self.book.estimate(chosen.name, digest)
         if stored is not None:
             found = stored
         else:
-            found = estimate_target(chosen, points, assumptions)
+            found = self._with_host_cautions(estimate_target(chosen, points, assumptions))
         if not self.book.readonly and any(point.star == chosen.name for point in points):
             self.book.add_estimate(found, digest, why or self._what_changed(chosen.name))
         return found
@@ -188,8 +192,33 @@ class Solved(Known):
         stands_on = assumptions_of(self.settings)
         for night in [night for night in nights if f"night {night}" not in done]:
             until = [point for point in points if point.night <= night]
-            found = estimate_target(chosen, until, stands_on)
+            found = self._with_host_cautions(estimate_target(chosen, until, stands_on))
             self.book.add_estimate(found, inputs_digest(chosen, until, stands_on), f"night {night}")
+
+    def _with_host_cautions(self, found: Estimate) -> Estimate:
+        """What taking the host's light off has noticed, said where μ is read."""
+        notes: Counter[str] = Counter()
+        for row in self.measured():
+            if (light := row.host_light.get(found.target)) is not None and light.taken_off:
+                notes.update(light.notes)
+        cautions = [Caution("host_light", note) for note, _ in notes.most_common(MOST_NOTES)]
+        ways: dict[str, set[str]] = {}
+        for point in self.solution().night_points:
+            if point.star == found.target and point.state == "kept" and not point.source:
+                ways.setdefault(point.band, set()).add(point.host_method)
+        referred = sorted(band for band, methods in ways.items() if "reference" in methods)
+        others = sorted(band for band, methods in ways.items() if "reference" not in methods)
+        if referred and others:
+            cautions.append(
+                Caution(
+                    "host_light_uneven",
+                    f"{', '.join(referred)} had a reference taken off, {', '.join(others)} not: light of the host left "
+                    "in some bands alone looks like another colour.",
+                )
+            )
+        doubtful = any(SUPERNOVA_LIGHT in note for note in notes) or bool(referred and others)
+        verdict = "μ is in doubt: see what is said of the host's light." if doubtful and found.mu is not None else ""
+        return replace(found, warnings=(*found.warnings, *cautions), verdict=verdict or found.verdict)
 
     def _what_changed(self, target: str) -> str:
         history = self.book.history(target)

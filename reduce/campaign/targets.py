@@ -12,6 +12,9 @@ from reduce.candles.relations import names_for
 from reduce.plain_text import PlainError, clean_text
 from reduce.records import ReddeningScale, Target, TargetKind
 
+FARTHEST_HOST_ARCSEC = 3600.0
+"""No galaxy but the very nearest reaches a degree from its centre (common practice)."""
+
 
 class TargetError(PlainError):
     """What was typed for a target cannot be understood."""
@@ -71,11 +74,11 @@ def parse_target(text: str, ebv_mw: str | None, host: str | None, reference: Pat
     z = _redshift(parts[4], name) if len(parts) == 5 and parts[4] else None
     e, scale = _reddening(ebv_mw, name) if ebv_mw else (None, "SF11")
     host_ra, host_dec = parse_position(host, f"Host of {name}") if host else (None, None)
-    return Target(
+    return _not_far_from_host(Target(
         name=name, kind=parts[3], ra_deg=ra, dec_deg=dec, z=z, ebv_mw=e, ebv_scale=scale,  # type: ignore[arg-type]
         host_ra_deg=host_ra, host_dec_deg=host_dec,
         reference_folder=str(reference.resolve()) if reference else None,
-    )  # fmt: skip
+    ))  # fmt: skip
 
 
 def new_target(facts: Mapping[str, str]) -> Target:
@@ -138,7 +141,7 @@ def corrected(
         target = replace(target, spectroscopic_type=clean_text(spectrum, 20) or None)
     if host is not None:
         host_ra, host_dec = parse_position(host, f"Host of {name}") if host else (None, None)
-        target = replace(target, host_ra_deg=host_ra, host_dec_deg=host_dec)
+        target = _not_far_from_host(replace(target, host_ra_deg=host_ra, host_dec_deg=host_dec))
     if reference == Path():
         target = replace(target, reference_folder=None)
     elif reference is not None:
@@ -173,6 +176,16 @@ def _relation(text: str, target: Target) -> str | None:
         known = ", ".join(names) or f"none for kind {target.kind}"
         raise TargetError(f"Target {target.name}: relation {clean_text(text, 60)!r} is not one of: {known}.")
     return found
+
+
+def _not_far_from_host(target: Target) -> Target:
+    apart = target.host_arcsec
+    if apart is not None and apart > FARTHEST_HOST_ARCSEC:
+        raise TargetError(
+            f"The host's centre is {apart / 3600:.1f} degrees from {target.name}: compare both positions, and whether "
+            "right ascensions are in degrees."
+        )
+    return target
 
 
 def _redshift(text: str, name: str) -> float:

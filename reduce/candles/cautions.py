@@ -49,6 +49,14 @@ def input_cautions(curve: LightCurve, target: Target, model_bands: tuple[str, ..
     found = []
     if target.spectroscopic_type is None:
         found.append(Caution("type_assumed", "no spectroscopic type is known; a normal type Ia is assumed."))
+    elif not target.spectroscopic_type.strip().lower().removeprefix("sn").strip().startswith("ia"):
+        found.append(
+            Caution(
+                "other_type",
+                f"the spectrum says {target.spectroscopic_type}, and this is the fit of a type Ia: μ means nothing.",
+                doubts_type=True,
+            )
+        )
     if target.z is None:
         found.append(Caution("redshift_unknown", "no redshift is known; it is taken as 0."))
     if target.ebv_mw is None:

@@ -150,10 +150,12 @@ def _estimate(context: _Context, solved: Solved) -> Estimate:
     why = _why_not(solved)
     lines = budget(solved, target, _redshift_error(solved, target))
     whole = total_error(lines)
+    said = cautions(context.curve, target, solved, whole)
+    stands = "μ is in doubt: this may be no normal type Ia." if any(c.doubts_type for c in said) else "μ stands"
     estimate = replace(
-        context.estimate(why or "μ stands"), t_max=t_max, t_max_err=t_err, dm15=dm15, dm15_err=dm15_err, e_host=e,
+        context.estimate(why or stands), t_max=t_max, t_max_err=t_err, dm15=dm15, dm15_err=dm15_err, e_host=e,
         e_host_err=e_err, chi2=solved.chi2, n=len(solved.system),
-        warnings=cautions(context.curve, target, solved, whole), curves=fit_curves(solved), points=fit_points(solved),
+        warnings=said, curves=fit_curves(solved), points=fit_points(solved),
         peak_mag=peak_mags(solved), offsets=source_offsets(solved),
     )  # fmt: skip
     if why is not None:

@@ -364,6 +364,11 @@ class Logbook(Log, Arrivals, HostRows, ImportedPoints):
         rows = self._database.rows("SELECT name, content FROM target ORDER BY rowid")
         return [from_plain(Target, json.loads(text)) for text in dict(rows).values()]
 
+    def reference_folders_ever(self) -> set[str]:
+        """Every folder that was ever named as a target's reference."""
+        rows = self._database.rows("SELECT content FROM target")
+        return {folder for (text,) in rows if (folder := json.loads(text).get("reference_folder"))}
+
     def set_setting(self, key: str, value: str) -> bool:
         """Remember a value; False when it is the present one."""
         if self.setting(key) == value:

@@ -12,6 +12,8 @@ from dataclasses import replace
 import pytest
 from small_campaign import BIAS, DARKS, FIRST, FLATS, lay, make_campaign, opened, reduce_here, reductions, target_of
 
+from reduce.campaign.door import CampaignError
+
 LATER = "2025-03-02/20250302-"
 SCIENCE = [f"{LATER}{n:03}-V.fits" for n in (4, 5, 6)]
 REFERENCE = [f"{FIRST}{n:03}-V.fits" for n in (39, 40, 41)]
@@ -95,3 +97,34 @@ def test_a_reference_frame_set_aside_changes_the_reference(folder):
         after = night_point(campaign)
         assert (after.host_method, after.provisional) == ("reference", False)
         assert 0.0 < abs(after.mag - before.mag) < 0.1
+
+
+def test_what_the_reference_holds_is_said_where_mu_is_read(folder):
+    take_reference(folder)
+    with opened(folder) as campaign:
+        found = campaign.estimate(campaign.target(None).name)
+        assert any("light of the supernova itself" in warning.evidence for warning in found.warnings)
+
+
+def test_a_reference_that_is_taken_away_leaves_no_science_behind(folder):
+    """Its frames lie outside the frames folder: they were never the target's."""
+    with opened(folder) as campaign:
+        name = campaign.target(None).name
+        before = repr(campaign.curve(name, per_frame=True))
+    take_reference(folder)
+    with opened(folder) as campaign:
+        campaign.correct_target(replace(campaign.target(None), reference_folder=None))
+    reduce_here(folder)
+    with opened(folder) as campaign:
+        assert repr(campaign.curve(name, per_frame=True)) == before
+        assert {row.kind for row in campaign.frame_rows()} == {"light", "bias", "dark", "flat"}
+
+
+def test_the_frames_are_no_reference_and_without_one_none_can_be_chosen(folder):
+    with opened(folder) as campaign:
+        target = campaign.target(None)
+        for there in (folder.parent / "frames", folder.parent):
+            with pytest.raises(CampaignError, match="holds the frames folder"):
+                campaign.correct_target(replace(target, reference_folder=str(there)))
+        with pytest.raises(CampaignError, match="has no reference"):
+            campaign.decide(f"host:{target.name}", "method", "reference")

@@ -46,6 +46,7 @@ def test_unknown_reddening_stays_unknown_and_scales_are_told_apart():
         ("A,1,2,type_ia", "0.05,XYZ", None, "neither SF11 nor SFD"),
         ("A,1,2,type_ia", "-0.1", None, "outside 0 to 5"),
         ("A,1,2,type_ia", None, "10", "not RA,DEC"),
+        ("A,1,2,type_ia", None, "10,10", "degrees from A"),
     ],
 )
 def test_each_mistake_is_one_sentence(text, ebv, host, words):

@@ -17,6 +17,13 @@ def test_a_type_ia_target_gets_the_type_ia_fit():
     assert TypeIa(Assumptions(h0=70.0)).fit(curve, target()).mu > type_ia.fit(curve, target()).mu
 
 
+def test_a_spectrum_of_another_type_takes_the_ground_from_under_mu():
+    for word, doubted in (("Ia", False), ("SN Ia-norm", False), ("II", True), ("Ic", True)):
+        found = type_ia.fit(simulated(TRUTH), target(spectroscopic_type=word))
+        assert any(w.name == "other_type" and w.doubts_type for w in found.warnings) is doubted
+        assert found.verdict.startswith("μ is in doubt" if doubted else "μ stands")
+
+
 @pytest.mark.parametrize("kind", ["other"])
 def test_other_kinds_say_that_there_is_no_relation_yet(kind):
     estimate = candle_for(kind).fit(simulated(TRUTH), target())

@@ -164,6 +164,10 @@ def test_new_and_reduce_on_a_few_frames(demo, tmp_path):
         (["new", "{tmp}/c", "--frames", "{tmp}", "--sequence", "/no.csv", "--target", "A,1,2,other"], "/no.csv"),
         (["new", "{tmp}/c", "--frames", "{tmp}", "--sequence", "x", "--target", "A,1,2"], "NAME,RA,DEC,KIND"),
         (["demo", "--folder", "{campaign}", "--headless"], "holds no demo"),
+        (["distance", "{campaign}", "--scale-mb", "nan"], "nan is not a number"),
+        (["distance", "{campaign}", "--scale-h0", "nan"], "nan is not a number"),
+        (["plan", "{campaign}", "--night", "9999-12-31"], "date of the evening"),
+        (["target", "{campaign}", "--host-light", "reference"], "has no reference"),
     ],
 )
 def test_a_refusal_is_one_sentence_and_exit_2(demo, tmp_path: Path, words, sentence):

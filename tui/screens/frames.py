@@ -91,6 +91,8 @@ def decide_on(app: FadelineApp, row: FrameRow | None, value: str) -> None:
         app.say("Keep and drop are for frames of the sky, not for calibration frames.")
     elif row.outcome == "not used":
         app.say(f"This frame is {row.reason}.")
+    elif value == "keep" and row.outcome in ("no match", "unreadable"):
+        app.say(f"This frame has no measurement to keep: {row.reason}")
     elif row.kind == "unknown":
         app.say("This file cannot be read: there is nothing to keep or drop.")
     else:
