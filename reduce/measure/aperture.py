@@ -66,7 +66,7 @@ def circle_overlap(dx: Floats, dy: Floats, radius_px: float) -> Floats:
     r = radius_px
     x = np.clip(np.concatenate([dx - 0.5, dx[:, :, -1:] + 0.5], axis=2), -r, r)
     y = np.clip(np.concatenate([dy - 0.5, dy[:, -1:, :] + 0.5], axis=1), -r, r)
-    chord = np.sqrt(np.maximum(r**2 - y**2, 0.0))
+    chord = np.sqrt((r - y) * (r + y))  # exactly 0 where y = r, which r² - y² need not be
     segment = np.sign(y) * (_under_arc(np.abs(x), r) - _under_arc(chord, r))
     corner = np.where(np.abs(x) <= chord, x * y, np.sign(x) * (chord * y + segment))
     return np.diff(np.diff(corner, axis=1), axis=2)
@@ -74,7 +74,7 @@ def circle_overlap(dx: Floats, dy: Floats, radius_px: float) -> Floats:
 
 def _under_arc(x: Floats, r: float) -> Floats:
     """∫₀ˣ √(r² - t²) dt."""
-    return 0.5 * (x * np.sqrt(np.maximum(r**2 - x**2, 0.0)) + r**2 * np.arcsin(np.clip(x / r, -1.0, 1.0)))
+    return 0.5 * (x * np.sqrt(np.maximum((r - x) * (r + x), 0.0)) + r**2 * np.arcsin(np.clip(x / r, -1.0, 1.0)))
 
 
 def measure_stars(
