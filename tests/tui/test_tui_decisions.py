@@ -143,9 +143,20 @@ async def test_refused_decision_is_a_sentence() -> None:
     app = FadelineApp(desk)
     async with app.run_test(size=(80, 24)) as pilot:
         await settle(pilot)
-        await pilot.press("2", "k")
+        await pilot.press("2", "d")
         await settle(pilot)
         assert "The disk is full: free some space." in screen_text(app)
+        assert desk.decisions == []
+
+
+async def test_a_frame_without_a_measurement_cannot_be_kept() -> None:
+    desk = FakeDesk()
+    app = FadelineApp(desk)
+    async with app.run_test(size=(80, 24)) as pilot:
+        await settle(pilot)
+        await pilot.press("2", "k")
+        await settle(pilot)
+        assert "no measurement to keep" in screen_text(app)
         assert desk.decisions == []
 
 
